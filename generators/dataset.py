@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,7 +15,7 @@ from generators.graph import Graph
 if TYPE_CHECKING:
     import pandas as pd
 
-Codes = NDArray[np.uint8] | NDArray[np.uint16]
+Codes = NDArray[np.uint8 | np.uint16]
 MAX_STATES = 65_535
 MAX_TABLE_CELLS = 1 << 26  # a contingency table of half a gigabyte: refused before memory is taken
 
@@ -65,7 +65,8 @@ class Dataset:
             raise InputError(f"codes must be uint8 or uint16, got {codes.dtype}")
         if codes.ndim != 2 or codes.shape[1] != len(names) or len(states) != len(names):
             raise InputError(
-                f"{len(names)} names, {len(states)} lists of states and codes of shape {codes.shape} do not fit"
+                f"{len(names)} names, {len(states)} lists of states and codes of shape {codes.shape} "
+                "do not fit"
             )
         if len(set(names)) != len(names):
             raise InputError("variable names must differ")
@@ -157,7 +158,9 @@ class Dataset:
         for side in shape:
             cells *= side
         if cells > MAX_TABLE_CELLS:
-            raise InputError(f"a table over {', '.join(names)} would have {cells} cells; at most {MAX_TABLE_CELLS}")
+            raise InputError(
+                f"a table over {', '.join(names)} would have {cells} cells; at most {MAX_TABLE_CELLS}"
+            )
         index = np.zeros(self.n_rows, dtype=np.int64)
         keep = np.ones(self.n_rows, dtype=np.bool_)
         for j, side in zip(columns, shape, strict=True):
@@ -174,7 +177,7 @@ class Dataset:
         for j, (name, own) in enumerate(zip(self.names, self.states, strict=True)):
             codes = self.codes[:, j].astype(np.int32)
             codes[codes == self.missing_code] = -1
-            columns[name] = pd.Categorical.from_codes(codes, categories=list(own))
+            columns[name] = pd.Categorical.from_codes(codes, categories=pd.Index(own))
         return pd.DataFrame(columns)
 
     def _position(self, name: str) -> int:

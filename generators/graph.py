@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -53,10 +53,14 @@ class Graph:
         names = tuple(self.names)
         arrow = np.array(self.arrow, dtype=np.bool_, order="C")
         if arrow.shape != (len(names), len(names)):
-            raise InputError(f"a graph over {len(names)} variables needs a square of that side, got {arrow.shape}")
+            raise InputError(
+                f"a graph over {len(names)} variables needs a square of that side, got {arrow.shape}"
+            )
         if len(set(names)) != len(names):
             twice = sorted({name for name in names if names.count(name) > 1})
-            raise InputError(f"variable names must differ; {', '.join(map(repr, twice))} stands more than once")
+            raise InputError(
+                f"variable names must differ; {', '.join(map(repr, twice))} stands more than once"
+            )
         if not all(isinstance(name, str) and name for name in names):
             raise InputError("variable names must be non-empty text")
         if arrow.diagonal().any():
@@ -91,7 +95,9 @@ class Graph:
         for (source, target), kind in kinds:
             for name in (source, target):
                 if name not in position:
-                    raise InputError(f"the edge {source!r} - {target!r} names {name!r}, which is not a variable")
+                    raise InputError(
+                        f"the edge {source!r} - {target!r} names {name!r}, which is not a variable"
+                    )
             i, j = position[source], position[target]
             if arrow[i, j] or arrow[j, i]:
                 raise InputError(f"the pair {source!r}, {target!r} has more than one edge")
@@ -100,7 +106,7 @@ class Graph:
         return cls(tuple(names), arrow)
 
     @classmethod
-    def from_networkx(cls, graph: nx.DiGraph, names: Sequence[str] | None = None) -> Graph:
+    def from_networkx(cls, graph: nx.DiGraph[Any], names: Sequence[str] | None = None) -> Graph:
         """Read a networkx directed graph; arcs in both directions make one undirected edge.
 
         Parameters
@@ -166,8 +172,8 @@ class Graph:
 
     def parents(self, name: str) -> tuple[str, ...]:
         """Return the variables with a directed edge into `name`, in the graph's order."""
-        column = self.directed[:, self.names.index(name)]
-        return tuple(self.names[i] for i in np.flatnonzero(column))
+        j = self.names.index(name)
+        return tuple(self.names[i] for i in np.flatnonzero(self.arrow[:, j] & ~self.arrow[j]))
 
     def order(self) -> tuple[int, ...]:
         """Return a topological order of the variables' positions, the smallest position first among equals.
@@ -240,11 +246,11 @@ class Graph:
         """Return the same graph under other names, in the same order."""
         return Graph(tuple(names), self.arrow)
 
-    def to_networkx(self) -> nx.DiGraph:
+    def to_networkx(self) -> nx.DiGraph[str]:
         """Return a networkx directed graph; an undirected edge becomes arcs in both directions."""
         import networkx as nx
 
-        graph = nx.DiGraph()
+        graph: nx.DiGraph[str] = nx.DiGraph()
         graph.add_nodes_from(self.names)
         graph.add_edges_from((self.names[i], self.names[j]) for i, j in np.argwhere(self.arrow).tolist())
         return graph

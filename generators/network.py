@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from types import MappingProxyType
@@ -70,7 +71,7 @@ class Cpt:
     @property
     def n_free(self) -> int:
         """The number of free parameters: joint parent states times (states - 1)."""
-        return self.p.size // self.p.shape[-1] * (self.p.shape[-1] - 1)
+        return self.p.size - math.prod(self.p.shape[:-1])
 
     def rows(self) -> NDArray[np.float64]:
         """Return the table as one row per joint parent state, first parent slowest: shape (q, r)."""
@@ -205,11 +206,17 @@ def _network_faults(graph: Graph, states: Sequence[Sequence[str]], cpts: Mapping
         cpt = cpts.get(name)
         if cpt is None:
             faults.append(f"variable {name!r} has no table")
+        elif cpt.variable != name:
+            faults.append(f"the table under {name!r} is that of {cpt.variable!r}")
         elif sorted(cpt.parents) != sorted(graph.parents(name)):
             faults.append(
-                f"the table of {name!r} has the parents {list(cpt.parents)}, the graph {list(graph.parents(name))}"
+                f"the table of {name!r} has the parents {list(cpt.parents)}, "
+                f"the graph {list(graph.parents(name))}"
             )
         elif cpt.p.shape != (*(n_states[parent] for parent in cpt.parents), n_states[name]):
-            faults.append(f"the table of {name!r} has the shape {cpt.p.shape}, which is not that of the states")
-    faults += [f"there is a table for {name!r}, which is not a variable" for name in cpts if name not in n_states]
+            faults.append(
+                f"the table of {name!r} has the shape {cpt.p.shape}, which is not that of the states"
+            )
+    strange = [name for name in cpts if name not in n_states]
+    faults += [f"there is a table for {name!r}, which is not a variable" for name in strange]
     return faults

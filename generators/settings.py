@@ -10,10 +10,13 @@ from __future__ import annotations
 import difflib
 import inspect
 import math
+import numbers
 import typing
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any, Literal
+
+from generators.errors import InputError
 
 REQUIRED = inspect.Parameter.empty
 
@@ -100,8 +103,10 @@ class Setting:
             return None
         fault = ValueError(f"must be {self.accepted}, got {value!r}")
         if self.kind in (int, float):
-            whole = isinstance(value, int) and not isinstance(value, bool)
-            if not whole and not (self.kind is float and isinstance(value, float) and math.isfinite(value)):
+            whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
+            if not whole and not (
+                self.kind is float and isinstance(value, numbers.Real) and math.isfinite(value)
+            ):
                 raise fault
             try:
                 number = self.kind(value)
@@ -150,7 +155,8 @@ def settings_of(function: Callable[..., Any], reserved: frozenset[str] = frozens
 
 
 def _setting(name: str, hint: Any, default: Any) -> Setting:
-    bounds, choices, optional = Between(), (), False
+    bounds, optional = Between(), False
+    choices: tuple[str, ...] = ()
     if hint is None and default is not REQUIRED:
         hint = type(default)
     while True:
@@ -237,3 +243,55 @@ class Registry(Mapping[str, Registered]):
         """Say that `name` is not registered, and which names are."""
         hint = nearest(str(name), self)
         return f"unknown {self.kind} {name!r}; accepted: {', '.join(sorted(self))}.{hint}"
+
+    def parse(self, name: str, given: Mapping[str, Any]) -> dict[str, Any]:
+        """Return the given settings of a registered function in their declared types.
+
+        Parameters
+        ----------
+        name : str
+            What is registered.
+        given : mapping of str to value
+            Settings that are not given keep their defaults and stay out of the result.
+
+        Raises
+        ------
+        InputError
+            If `name` is not registered; or with one line per setting that is unknown, has a value
+            that is not accepted, or has no default and is not given.
+
+        Examples
+        --------
+        >>> shapes = Registry("shape")
+        >>> @shapes.register("disc", reference="none")
+        ... def disc(*, radius: typing.Annotated[float, Between(0)], rng): ...
+        >>> shapes.parse("disc", {"radius": 2})
+        {'radius': 2.0}
+        >>> shapes.parse("disc", {"radius": 2, "hue": 1})
+        Traceback (most recent call last):
+            ...
+        generators.errors.InputError: shape 'disc': unknown setting 'hue'; accepted: radius.
+        """
+        if name not in self:
+            raise InputError(self.unknown(name))
+        declared = self[name].settings
+        place = f"{self.kind} {name!r}"
+        values, faults = {}, []
+        for key, value in given.items():
+            if key not in declared:
+                accepted = ", ".join(sorted(declared)) or "none"
+                hint = nearest(key, declared)
+                faults.append(f"{place}: unknown setting {key!r}; accepted: {accepted}.{hint}")
+                continue
+            try:
+                values[key] = declared[key].parse(value)
+            except ValueError as error:
+                faults.append(f"{place}: {key}: {error}")
+        faults += [
+            f"{place}: {key}: {setting.accepted} is required"
+            for key, setting in declared.items()
+            if setting.default is REQUIRED and key not in given
+        ]
+        if faults:
+            raise InputError(*faults)
+        return values

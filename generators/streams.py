@@ -17,7 +17,7 @@ KEY_BYTES = 16
 
 
 def canonical_json(value: Any) -> str:
-    """Return the one JSON text that stands for `value` in a digest.
+    r"""Return the one JSON text that stands for `value` in a digest.
 
     Keys are sorted, no white space, non-ASCII escaped, floats by `repr` (so 2 and 2.0 differ: settings
     are brought to their declared type before they come here), bytes as hexadecimal.
@@ -31,7 +31,7 @@ def canonical_json(value: Any) -> str:
 
     Examples
     --------
-    >>> canonical_json({"b": 1.0, "a": [True, None, b"\\x0f"]})
+    >>> canonical_json({"b": 1.0, "a": [True, None, b"\x0f"]})
     '{"a":[true,null,"0f"],"b":1.0}'
     """
     return json.dumps(

@@ -5,16 +5,12 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
-from types import MappingProxyType
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from generators.graph import Graph
-
-EMPTY: Mapping[str, Any] = MappingProxyType({})
-
 
 class Status(StrEnum):
     """How a run ended."""
@@ -219,8 +215,8 @@ class Condition:
     """
 
     networks: Mapping[str, Any]
-    data: Mapping[str, Any] = field(default_factory=lambda: EMPTY)
-    factors: Mapping[str, Any] = field(default_factory=lambda: EMPTY)
+    data: Mapping[str, Any] = field(default_factory=dict)
+    factors: Mapping[str, Any] = field(default_factory=dict)
     replicates: int = 1
     datasets: int = 1
 
@@ -258,8 +254,8 @@ class Outcome:
     cause: str = ""
     graph: Graph | None = None
     extendable: bool | None = None
-    measures: Mapping[str, float] = field(default_factory=lambda: EMPTY)
-    undefined: Mapping[str, str] = field(default_factory=lambda: EMPTY)
+    measures: Mapping[str, float] = field(default_factory=dict)
+    undefined: Mapping[str, str] = field(default_factory=dict)
     wall_seconds: float | None = None
     cpu_seconds: float | None = None
     peak_rss_mb: float | None = None

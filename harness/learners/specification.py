@@ -19,7 +19,7 @@ from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import DIRECTED, UNDIRECTED, Graph
 from generators.settings import Setting, settings_of
-from harness.records import EMPTY, Answer, Declined
+from harness.records import Answer, Declined
 
 RETURNS = ("dag", "cpdag", "pdag", "skeleton")
 DIRECTIONS = ("class", "causal")
@@ -72,7 +72,7 @@ class Specification:
     missing: bool = False
     threads: int = 1
     revision: int = 1
-    exempt: Mapping[str, str] = field(default_factory=lambda: EMPTY)
+    exempt: Mapping[str, str] = field(default_factory=dict)
     baseline: bool = False
     takes_rng: bool = True
 
@@ -91,7 +91,7 @@ def learner(
     missing: bool = False,
     threads: int = 1,
     revision: int = 1,
-    exempt: Mapping[str, str] = EMPTY,
+    exempt: Mapping[str, str] | None = None,
     baseline: bool = False,
 ) -> Callable[[Function], Function]:
     """Attach a specification to a function; nothing is registered by importing it.
@@ -141,7 +141,7 @@ def learner(
             missing,
             threads,
             revision,
-            dict(exempt),
+            dict(exempt or {}),
             baseline,
             "rng" in inspect.signature(function).parameters,
         )

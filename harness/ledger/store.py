@@ -44,6 +44,17 @@ MEASURE_COLUMNS = (
     "perfect_map",
 )
 SCORER_REVISION = 1
+_MACHINE_CODES = {
+    sqlite3.SQLITE_FULL,
+    sqlite3.SQLITE_IOERR,
+    sqlite3.SQLITE_READONLY,
+    sqlite3.SQLITE_CANTOPEN,
+    sqlite3.SQLITE_BUSY,
+    sqlite3.SQLITE_LOCKED,
+    sqlite3.SQLITE_CORRUPT,
+    sqlite3.SQLITE_NOTADB,
+    sqlite3.SQLITE_PERM,
+}
 _HEADER_MAGIC = b"SQLite format 3\x00"
 _HEADER_BYTES = 100
 
@@ -124,8 +135,11 @@ class Ledger:
         """
         path = Path(path)
         _refuse_what_is_no_ledger(path)
-        connection = _connect(path, "ro")
+        # Where it may, a reader tidies up the log's files when it is the last to close.
+        may_write = os.access(path, os.W_OK) and os.access(path.parent, os.W_OK)
+        connection = _connect(path, "rw" if may_write else "ro")
         with _naming(path):
+            connection.execute("PRAGMA query_only = ON")
             _refuse_damage(path, connection)
         return cls(path, connection, None)
 
@@ -256,6 +270,10 @@ class Ledger:
                     raise InputError(self._redraw_message("the column order of a dataset"))
             self._ids["dataset", (dataset.key, dataset.distortions)] = found
             return found
+
+    def dataset_id(self, key: bytes, distortions: str) -> int:
+        """Return the row of a dataset that was stored in this session."""
+        return self._ids["dataset", (key, distortions)]
 
     def store_run(
         self, dataset: int, rows: int, learner: Learner, outcome: Outcome, *, session: int, asked_by: str
@@ -469,10 +487,10 @@ def _refuse_damage(path: Path, connection: sqlite3.Connection) -> None:
     try:
         found = connection.execute("PRAGMA quick_check(1)").fetchone()[0]
     except sqlite3.DatabaseError as error:
-        found = str(error)
-        if isinstance(error, sqlite3.OperationalError) and "malformed" not in found:
+        if error.sqlite_errorcode & 0xFF not in (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB):
             connection.close()
             raise
+        found = str(error)
     if found != "ok":
         connection.close()
         first = str(found).splitlines()[0]
@@ -504,11 +522,11 @@ def _naming(path: Path) -> Iterator[None]:
     """Turn what the machine does to the file into `MachineStop`, with the ledger's name."""
     try:
         yield
-    except sqlite3.OperationalError as error:
-        raise MachineStop(f"{path}: {error}. The ledger holds everything committed before; run again to resume") from error
     except sqlite3.DatabaseError as error:
-        if isinstance(error, sqlite3.IntegrityError | sqlite3.ProgrammingError):
+        if error.sqlite_errorcode & 0xFF not in _MACHINE_CODES:  # the primary code; the rest would be bugs of ours
             raise
-        raise MachineStop(f"{path}: the ledger cannot be used ({error})") from error
+        raise MachineStop(
+            f"{path}: {error}. What was committed before is safe; run again to resume"
+        ) from error
     except OSError as error:
         raise MachineStop(f"{path}: {error.strerror or error}") from error

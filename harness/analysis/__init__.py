@@ -1,0 +1,1 @@
+"""Analysis: runs in, answers out; nothing is run, read or drawn here."""

@@ -1,0 +1,244 @@
+"""The local engine: a supervisor per worker, work handed out ahead, events handed back."""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from collections import deque
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field, replace
+from multiprocessing.connection import Connection, wait
+from pathlib import Path
+from typing import IO, Any
+
+from generators.errors import InputError
+from harness.execution.messages import Drawn, Ended, Event, Work
+from harness.records import Learner, MachineStop
+
+THREAD_VARIABLES = (
+    "OMP_NUM_THREADS",
+    "OPENBLAS_NUM_THREADS",
+    "MKL_NUM_THREADS",
+    "NUMEXPR_NUM_THREADS",
+    "VECLIB_MAXIMUM_THREADS",
+    "NUMBA_NUM_THREADS",
+)
+# The folder of *this* package goes first: another `harness` may stand in the working folder.
+_ROOT = Path(__file__).parents[2]
+_START = """
+import sys
+sys.path.insert(0, sys.argv[1])
+from harness.execution.supervisor import main
+main(int(sys.argv[2]))
+"""
+WORK_AHEAD = 2  # pieces of work per worker, so that none waits for the main process
+MAX_BATCH = 200  # events handed back at once: what one commit of the ledger holds
+LOOK_SECONDS = 0.2  # how soon a wish to stop is noticed
+MAX_DEATHS = 5
+
+
+@dataclass(slots=True, eq=False)
+class _Worker:
+    """A supervisor, seen from the main process."""
+
+    process: subprocess.Popen[bytes]
+    connection: Connection
+    errors: IO[bytes]
+    is_ready: bool = False
+    is_over: bool = False
+    open_work: dict[int, Work] = field(default_factory=dict)
+    ended: dict[int, set[int]] = field(default_factory=dict)
+
+
+class LocalEngine:
+    """Runs work on this machine.
+
+    Parameters
+    ----------
+    learners : tuple of Learner
+    n_workers : int
+        Runs at a time.
+    threads : int
+        What a learner may use; set before its process starts.
+
+    Notes
+    -----
+    Use in a ``with`` block: leaving it ends every process.
+    """
+
+    def __init__(self, learners: tuple[Learner, ...], *, n_workers: int, threads: int = 1) -> None:
+        self._learners = learners
+        self._threads = threads
+        self._n_workers = n_workers
+        self._workers: list[_Worker] = []
+        self._again: deque[Work] = deque()
+        self._is_stopping = False
+        self._is_exhausted = False
+        self._deaths = 0
+
+    def __enter__(self) -> LocalEngine:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        for worker in self._workers:
+            worker.connection.close()  # a supervisor that loses its main process ends its runners
+        for worker in self._workers:
+            with contextlib.suppress(subprocess.TimeoutExpired):
+                worker.process.wait(timeout=5)
+            worker.process.kill()
+            worker.process.wait()
+            worker.errors.close()
+
+    def stop(self) -> None:
+        """Finish what is running, and nothing more."""
+        self._is_stopping = True
+
+    def batches(self, works: Iterator[Work], on_ready: Callable[[], None] | None = None) -> Iterator[list[Event]]:
+        """Do all work and yield its events in batches, an empty one when there was nothing to wait for.
+
+        Parameters
+        ----------
+        works : iterator of Work
+            Taken as workers become free.
+        on_ready : callable, optional
+            Called once, when the first worker has everything loaded and compiled.
+
+        Raises
+        ------
+        InputError
+            If a network cannot be drawn.
+        MachineStop
+            If workers keep dying.
+        """
+        source = iter(works)
+        self._workers.append(self._start())
+        told_to_stop = False
+        while True:
+            if self._is_stopping and not told_to_stop:
+                told_to_stop = True
+                self._tell_to_stop()
+            if not told_to_stop:
+                self._hand_out(source)
+            live = [worker for worker in self._workers if not worker.is_over]
+            if (self._is_exhausted or told_to_stop) and not any(worker.open_work for worker in live):
+                return
+            batch: list[Event] = []
+            end = time.monotonic() + LOOK_SECONDS
+            while len(batch) < MAX_BATCH:
+                patience = max(0.0, end - time.monotonic()) if not batch else 0.0
+                ready = wait([worker.connection for worker in live if not worker.is_over], patience)
+                if not ready:
+                    break
+                for worker in live:
+                    if worker.connection in ready:
+                        batch += self._read(worker, on_ready)
+                if not told_to_stop:
+                    self._hand_out(source)
+            yield batch
+
+    def _hand_out(self, source: Iterator[Work]) -> None:
+        for worker in self._workers:
+            while worker.is_ready and not worker.is_over and len(worker.open_work) < WORK_AHEAD:
+                work = self._again.popleft() if self._again else next(source, None)
+                if work is None:
+                    self._is_exhausted = True
+                    return
+                worker.open_work[work.number] = work
+                worker.ended[work.number] = set()
+                with contextlib.suppress(BrokenPipeError):  # its death is noticed where it is read
+                    worker.connection.send(work)
+
+    def _read(self, worker: _Worker, on_ready: Callable[[], None] | None) -> list[Event]:
+        try:
+            message: Any = worker.connection.recv()
+        except (EOFError, ConnectionResetError):
+            self._replace(worker)
+            return []
+        word, *rest = message
+        if word == "drawn":
+            number, network, dataset = rest
+            return [Drawn(worker.open_work[number], network, dataset)]
+        if word == "ended":
+            number, position, outcome, overhead = rest
+            worker.ended[number].add(position)
+            self._deaths = 0
+            work = worker.open_work[number]
+            return [Ended(work, work.requests[position], outcome, overhead)]
+        self._note(worker, word, rest, on_ready)
+        return []
+
+    def _note(
+        self, worker: _Worker, word: str, rest: list[Any], on_ready: Callable[[], None] | None
+    ) -> None:
+        if word == "ready":
+            worker.is_ready = True
+            if len(self._workers) == 1:
+                # The first has compiled what there was to compile; the others find it in the cache.
+                if on_ready is not None:
+                    on_ready()
+                self._workers += [self._start() for _ in range(self._n_workers - 1)]
+        elif word == "finished":
+            del worker.open_work[rest[0]], worker.ended[rest[0]]
+        elif word == "stopped":
+            worker.is_over = True
+            worker.open_work.clear()
+        elif word == "cannot-draw":
+            raise InputError(*rest[0].splitlines())
+
+    def _tell_to_stop(self) -> None:
+        for worker in self._workers:
+            if worker.is_ready and not worker.is_over:
+                with contextlib.suppress(BrokenPipeError):
+                    worker.connection.send(None)
+            else:
+                worker.is_over = True
+                worker.open_work.clear()
+
+    def _replace(self, worker: _Worker) -> None:
+        """Start another supervisor for one that died, and have its unfinished work done again."""
+        worker.process.wait()
+        worker.is_over = True
+        self._deaths += 1
+        if self._deaths > MAX_DEATHS:
+            worker.errors.seek(0)
+            last = worker.errors.read().decode(errors="replace").strip().splitlines()[-1:]
+            raise MachineStop(f"worker processes keep dying{': ' + last[0] if last else ''}")
+        for number, work in worker.open_work.items():
+            done = worker.ended[number]
+            left = tuple(request for position, request in enumerate(work.requests) if position not in done)
+            if left:
+                self._again.append(replace(work, requests=left))
+                self._is_exhausted = False
+        worker.open_work.clear()
+        self._workers.remove(worker)
+        worker.connection.close()
+        worker.errors.close()
+        if not self._is_stopping:
+            self._workers.append(self._start())
+
+    def _start(self) -> _Worker:
+        ours, theirs = socket.socketpair()
+        errors = tempfile.TemporaryFile()
+        environment = {**os.environ, **dict.fromkeys(THREAD_VARIABLES, str(self._threads))}
+        try:
+            process = subprocess.Popen(
+                [sys.executable, "-P", "-c", _START, str(_ROOT), str(theirs.fileno())],
+                stdin=subprocess.DEVNULL,
+                stdout=errors,
+                stderr=errors,
+                pass_fds=[theirs.fileno()],
+                env=environment,
+                start_new_session=True,  # the terminal's Ctrl-C is for the main process alone
+            )
+        except OSError as error:
+            raise MachineStop(f"a worker process cannot be started ({error.strerror})") from error
+        finally:
+            theirs.close()
+        connection = Connection(ours.detach())
+        connection.send(self._learners)
+        return _Worker(process, connection, errors)

@@ -1,0 +1,162 @@
+"""One run: draw the network and dataset, call the learner on its view, score what comes back."""
+
+from __future__ import annotations
+
+import os
+import resource
+import statistics
+import time
+import traceback
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from generators.dataset import Dataset, View
+from generators.graph import Graph
+from generators.network import Network
+from generators.sampling import sample
+from generators.streams import canonical_json, digest
+from harness.execution import memory
+from harness.execution.messages import Request, Work
+from harness.learners.specification import InvalidAnswer, Specification, call
+from harness.ledger.store import DrawnDataset, DrawnNetwork
+from harness.plan.recipes import draw_network, draw_view, learner_rng
+from harness.records import Answer, Declined, Learner, Outcome, Status
+from harness.scorers.structure import score_answer
+from harness.scorers.truth import Truth
+
+REPEAT_BELOW_SECONDS = 1e-3
+CALLS_WHEN_SHORT = 3
+MAX_CAUSE_CHARACTERS = 4000
+
+
+@dataclass(frozen=True, slots=True)
+class Material:
+    """What all runs on one dataset share."""
+
+    work: Work
+    network: Network
+    truth: Truth
+    view: View
+    masked: Dataset
+
+    @property
+    def drawn_network(self) -> DrawnNetwork:
+        """The network as the ledger stores it."""
+        work = self.work
+        return DrawnNetwork(
+            work.network_key, work.networks, work.replicate, self.network.graph, self.network.key()
+        )
+
+    @property
+    def drawn_dataset(self) -> DrawnDataset:
+        """The dataset as the ledger stores it."""
+        view_digest = digest("view", self.view.words())
+        return DrawnDataset(self.work.dataset_key, self.work.index, canonical_json(self.work.data), view_digest)
+
+
+@dataclass(frozen=True, slots=True)
+class Timed:
+    """A learner's graph in network order, and what its call took."""
+
+    graph: Graph
+    wall_seconds: float
+    cpu_seconds: float
+    peak_rss_mb: float
+    load: float
+
+
+class MaterialSource:
+    """Draws the material of work, keeping the last network, which the next dataset may share."""
+
+    def __init__(self) -> None:
+        self._key: bytes | None = None
+        self._network: Network | None = None
+        self._truth: Truth | None = None
+
+    def draw(self, work: Work) -> Material:
+        """Draw network, dataset and view of some work."""
+        if self._network is None or self._truth is None or self._key != work.network_key:
+            self._network = draw_network(work.networks, work.network_key)
+            self._truth = Truth.of(self._network)
+            self._key = work.network_key
+        data = sample(self._network, work.max_rows, work.dataset_key)
+        view = draw_view(work.dataset_key, self._network.cardinalities.tolist())
+        return Material(work, self._network, self._truth, view, view.mask(data))
+
+
+def timed_call(specification: Specification, material: Material, request: Request) -> Timed:
+    """Call the learner on its view, and time nothing but that call.
+
+    A call under a millisecond is made three times with the same stream, and the median time counts;
+    the first answer is the answer.
+    """
+    data = material.masked.first(request.rows)
+    fresh_rng = _rng_source(material.work.dataset_key, request.rows)
+    load = os.getloadavg()[0]
+    memory.reset_peak()
+    answer, wall, cpu = _clocked(specification, data, request.settings, fresh_rng())
+    peak = memory.peak_mb()
+    walls, cpus = [wall], [cpu]
+    if wall < REPEAT_BELOW_SECONDS:
+        for _ in range(CALLS_WHEN_SHORT - 1):
+            _, wall, cpu = _clocked(specification, data, request.settings, fresh_rng())
+            walls.append(wall)
+            cpus.append(cpu)
+    graph = material.view.unmask(answer.graph, material.network.names)
+    return Timed(graph, statistics.median(walls), statistics.median(cpus), peak, load)
+
+
+def scored(material: Material, learner: Learner, timed: Timed) -> Outcome:
+    """Score a learner's graph against the truth."""
+    scores = score_answer(
+        material.truth, timed.graph, returns=learner.returns, directions=learner.directions
+    )
+    return Outcome(
+        Status.DONE,
+        graph=timed.graph,
+        extendable=scores.extendable,
+        measures=scores.values,
+        undefined=scores.undefined,
+        wall_seconds=timed.wall_seconds,
+        cpu_seconds=timed.cpu_seconds,
+        peak_rss_mb=timed.peak_rss_mb,
+        load=timed.load,
+    )
+
+
+def failed(error: BaseException) -> Outcome:
+    """Say what became of a run whose learner raised `error`."""
+    text = str(error).strip() or type(error).__name__
+    if isinstance(error, Declined):
+        return Outcome(Status.DECLINED, text)
+    if isinstance(error, InvalidAnswer):
+        return Outcome(Status.INVALID, text)
+    if isinstance(error, MemoryError):
+        return Outcome(Status.OUT_OF_MEMORY, text)
+    if isinstance(error, SystemExit):
+        return Outcome(Status.CRASHED, f"the learner ended the process (exit code {error.code})")
+    first = traceback.format_exception_only(error)[-1].strip()
+    trace = "".join(traceback.format_exception(error))
+    return Outcome(Status.ERROR, f"{first}\n{trace}"[:MAX_CAUSE_CHARACTERS])
+
+
+def _rng_source(dataset_key: bytes, rows: int) -> Callable[[], np.random.Generator]:
+    return lambda: learner_rng(dataset_key, rows)
+
+
+def _clocked(
+    specification: Specification, data: Dataset, settings: Mapping[str, Any], rng: np.random.Generator
+) -> tuple[Answer, float, float]:
+    cpu = _cpu_clock()
+    wall = time.perf_counter()
+    answer = call(specification, data, settings, rng)
+    return answer, time.perf_counter() - wall, _cpu_clock() - cpu
+
+
+def _cpu_clock() -> float:
+    # The learner's own children count once they have ended.
+    children = resource.getrusage(resource.RUSAGE_CHILDREN)
+    return time.process_time() + children.ru_utime + children.ru_stime

@@ -1,0 +1,91 @@
+"""What the ledger lacks of a plan, in the order in which it is done.
+
+Replicate by replicate through all conditions, so that a run that is stopped leaves a balanced ledger;
+within a dataset from few rows to many, and there in the plan's order of learners.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+
+from generators.streams import canonical_json
+from harness.execution.messages import Request, Work
+from harness.ledger.store import KnownRun, RunKey
+from harness.plan.expansion import settings_for
+from harness.plan.recipes import dataset_key
+from harness.plan.schema import Plan
+from harness.records import Learner, Status
+
+
+@dataclass(frozen=True, slots=True)
+class DatasetSlot:
+    """A place of the plan for one dataset: condition, replicate and index, with its keys."""
+
+    condition: int
+    replicate: int
+    index: int
+    network_key: bytes
+    dataset_key: bytes
+
+
+def slots(plan: Plan, network_keys: Mapping[int, list[bytes]]) -> Iterator[DatasetSlot]:
+    """Go through all datasets of a plan, replicate by replicate.
+
+    Parameters
+    ----------
+    plan : Plan
+    network_keys : mapping of int to list of bytes
+        For each condition, the keys of its replicates.
+    """
+    for replicate in range(max((c.replicates for c in plan.conditions), default=0)):
+        for position, condition in enumerate(plan.conditions):
+            if replicate < condition.replicates:
+                key = network_keys[position][replicate]
+                for index in range(condition.datasets):
+                    yield DatasetSlot(position, replicate, index, key, dataset_key(key, index))
+
+
+def missing_work(
+    plan: Plan, network_keys: Mapping[int, list[bytes]], known: Mapping[RunKey, KnownRun]
+) -> Iterator[Work]:
+    """Yield what is to be run, one piece of work per dataset that lacks any run."""
+    number = 0
+    for slot in slots(plan, network_keys):
+        condition = plan.conditions[slot.condition]
+        distortions = canonical_json(condition.data)
+        requests = tuple(
+            Request(position, rows, settings_for(learner, condition))
+            for rows in plan.rows
+            for position, learner in enumerate(plan.learners)
+            if is_missing(known.get(RunKey(slot.dataset_key, distortions, rows, learner.key)), learner)
+        )
+        if requests:
+            yield Work(
+                number,
+                slot.condition,
+                dict(condition.networks),
+                dict(condition.data),
+                slot.network_key,
+                slot.replicate,
+                slot.dataset_key,
+                slot.index,
+                requests,
+            )
+            number += 1
+
+
+def is_missing(known: KnownRun | None, learner: Learner) -> bool:
+    """Whether a run is to be done, given what the ledger knows of it.
+
+    Limits are not identity: a run that hit a limit is asked again when today's is higher, and one that
+    finished is asked again when it took longer than today's.
+    """
+    if known is None or known.status == Status.INTERRUPTED:
+        return True
+    limits = learner.limits
+    if known.status == Status.TIMEOUT:
+        return known.limits.seconds < limits.seconds
+    if known.status == Status.OUT_OF_MEMORY:
+        return known.limits.memory_mb < limits.memory_mb
+    return known.status == Status.DONE and (known.wall_seconds or 0.0) > limits.seconds

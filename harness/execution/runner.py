@@ -1,0 +1,217 @@
+"""The forked process in which learners are called.
+
+It talks to its supervisor over one connection: commands come in as Python objects of ours, answers go
+back as JSON, since in a one-run process a stranger's code shares the memory.
+"""
+
+from __future__ import annotations
+
+import ctypes
+import gc
+import json
+import os
+import resource
+import signal
+import sys
+from collections.abc import Callable, Mapping
+from multiprocessing.connection import Connection
+from pathlib import Path
+from typing import Any
+
+from generators.errors import InputError
+from generators.graph import Graph
+from generators.streams import canonical_json
+from harness.execution.memory import MEBIBYTE
+from harness.execution.messages import Work
+from harness.execution.one_run import Material, MaterialSource, Timed, failed, scored, timed_call
+from harness.learners.sources import folder_of, load, own_folder
+from harness.learners.specification import Specification
+from harness.ledger.store import graph_text
+from harness.records import Learner, Outcome, Status
+
+_CONNECTION_FILE = 3
+_SET_PARENT_DEATH_SIGNAL = 1  # PR_SET_PDEATHSIG of <sys/prctl.h>
+ADDRESS_SPACE_SLACK_MB = 8192  # address space is not memory: numba and the BLAS reserve gigabytes
+
+
+def fork_runner(main: Callable[[Connection], None], connection: Connection, output: int, folder: Path) -> int:
+    """Fork a runner in a session of its own and return its process number.
+
+    Parameters
+    ----------
+    main : callable
+        Takes the connection; the process ends when it returns.
+    connection : Connection
+        The runner's end.
+    output : int
+        An open file that takes standard output and error.
+    folder : Path
+        The working folder, so that relative files stay there.
+    """
+    parent = os.getpid()
+    pid = os.fork()
+    if pid:
+        return pid
+    code = 1
+    try:
+        os.setsid()
+        _die_with_parent(parent)
+        signal.signal(signal.SIGTERM, signal.SIG_DFL)
+        signal.signal(signal.SIGINT, signal.SIG_IGN)
+        os.chdir(folder)
+        _keep_only(connection.fileno(), output)
+        main(Connection(_CONNECTION_FILE))
+        code = 0
+    except (EOFError, BrokenPipeError, ConnectionResetError):
+        code = 0  # the supervisor is gone, and so is the reason to be
+    except BaseException:
+        sys.excepthook(*sys.exc_info())
+    finally:
+        sys.stdout.flush()
+        sys.stderr.flush()
+        os._exit(code)
+    raise AssertionError("not reached")
+
+
+def serve_many(learners: tuple[Learner, ...], specifications: Mapping[int, Specification]) -> Callable[[Connection], None]:
+    """Return the main function of a runner that takes run after run of built-in learners."""
+
+    def main(connection: Connection) -> None:
+        gc.freeze()
+        source = MaterialSource()
+        material: Material | None = None
+        while True:
+            command, *arguments = connection.recv()
+            if command == "draw":
+                material = _draw(connection, source, arguments[0])
+                continue
+            assert material is not None
+            request = material.work.requests[arguments[0]]
+            learner = learners[request.learner]
+            if command == "learn":
+                _send(connection, event="calling")
+                try:
+                    outcome = scored(material, learner, timed_call(specifications[request.learner], material, request))
+                except Exception as error:
+                    outcome = failed(error)
+            else:
+                outcome = scored(material, learner, _timed_from(arguments[1], material.network.names))
+            _send(connection, event="outcome", **_outcome_fields(outcome))
+
+    return main
+
+
+def serve_one(learner: Learner, work: Work, position: int) -> Callable[[Connection], None]:
+    """Return the main function of a runner that calls somebody's learner once."""
+
+    def main(connection: Connection) -> None:
+        material = MaterialSource().draw(work)
+        _bound_address_space(learner.limits.memory_mb)
+        try:
+            with own_folder(folder_of(learner)):
+                specification = load(learner)
+                _send(connection, event="calling")
+                timed = timed_call(specification, material, work.requests[position])
+        except BaseException as error:
+            # A learner's way of ending is a status, whatever it is.
+            _send(connection, event="outcome", **_outcome_fields(failed(error)))
+        else:
+            _send(connection, event="learned", timed=_timed_fields(timed))
+
+    return main
+
+
+def outcome_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Outcome:
+    """Rebuild an outcome from its JSON form."""
+    edges = fields["edges"]
+    graph = None if edges is None else _graph_from(edges, names)
+    plain = {name: fields[name] for name in _PLAIN_FIELDS}
+    return Outcome(**{**plain, "status": Status(fields["status"]), "graph": graph})
+
+
+_PLAIN_FIELDS = (
+    "status",
+    "cause",
+    "extendable",
+    "measures",
+    "undefined",
+    "wall_seconds",
+    "cpu_seconds",
+    "peak_rss_mb",
+    "load",
+)
+
+
+def _outcome_fields(outcome: Outcome) -> dict[str, Any]:
+    fields = {name: getattr(outcome, name) for name in _PLAIN_FIELDS}
+    fields["edges"] = None if outcome.graph is None else json.loads(graph_text(outcome.graph))
+    return fields
+
+
+def _timed_fields(timed: Timed) -> dict[str, Any]:
+    return {
+        "edges": json.loads(graph_text(timed.graph)),
+        "wall_seconds": timed.wall_seconds,
+        "cpu_seconds": timed.cpu_seconds,
+        "peak_rss_mb": timed.peak_rss_mb,
+        "load": timed.load,
+    }
+
+
+def _timed_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Timed:
+    rest = {name: value for name, value in fields.items() if name != "edges"}
+    return Timed(graph=_graph_from(fields["edges"], names), **rest)
+
+
+def _graph_from(edges: list[list[int]], names: tuple[str, ...]) -> Graph:
+    return Graph.from_edges(
+        names,
+        directed=[(names[i], names[j]) for i, j, kind in edges if kind],
+        undirected=[(names[i], names[j]) for i, j, kind in edges if not kind],
+    )
+
+
+def _draw(connection: Connection, source: MaterialSource, work: Work) -> Material | None:
+    try:
+        material = source.draw(work)
+    except InputError as error:
+        _send(connection, event="cannot-draw", message=str(error))
+        return None
+    network, dataset = material.drawn_network, material.drawn_dataset
+    _send(
+        connection,
+        event="drawn",
+        names=network.graph.names,
+        edges=json.loads(graph_text(network.graph)),
+        cpts_digest=network.cpts_digest,
+        view_digest=dataset.view_digest,
+        distortions=dataset.distortions,
+    )
+    return material
+
+
+def _send(connection: Connection, **fields: Any) -> None:
+    connection.send_bytes(canonical_json(fields).encode("ascii"))
+
+
+def _die_with_parent(parent: int) -> None:
+    if sys.platform.startswith("linux"):
+        ctypes.CDLL(None, use_errno=True).prctl(_SET_PARENT_DEATH_SIGNAL, signal.SIGKILL)
+        if os.getppid() != parent:  # it died between the fork and this line
+            os._exit(1)
+
+
+def _keep_only(connection: int, output: int) -> None:
+    # The supervisor's other files must not stay open here: their ends would never be seen to close.
+    nothing = os.open(os.devnull, os.O_RDONLY)
+    os.dup2(nothing, 0)
+    os.dup2(output, 1)
+    os.dup2(output, 2)
+    os.dup2(connection, _CONNECTION_FILE)
+    os.closerange(_CONNECTION_FILE + 1, resource.getrlimit(resource.RLIMIT_NOFILE)[0])
+
+
+def _bound_address_space(memory_mb: int) -> None:
+    limit = (memory_mb * 4 + ADDRESS_SPACE_SLACK_MB) * MEBIBYTE
+    _, hard = resource.getrlimit(resource.RLIMIT_AS)
+    resource.setrlimit(resource.RLIMIT_AS, (limit if hard < 0 else min(limit, hard), hard))

@@ -1,0 +1,537 @@
+"""Tests of (conditional) independence in contingency tables, plain and compiled.
+
+Both statistics compare the counts of each stratum, one joint state of the conditioning variables, with
+those expected under independence, E = row margin x column margin / stratum size:
+
+    G2 = 2 sum N log(N / E)        (Wilks 1938)
+    X2 = sum (N - E)^2 / E         (Pearson 1900)
+
+How sparse tables are read is a convention, and moves results; here, everywhere:
+
+- the degrees of freedom are nominal, (r_x - 1)(r_y - 1) times the product of the *declared* numbers of
+  states of the conditioning variables, whatever the rows show;
+- cells whose expectation is 0 contribute nothing, so a variable that shows one state only gives the
+  statistic 0 and the p-value 1;
+- a variable with one declared state has 0 degrees of freedom, and is independent of everything.
+
+The lower half of this file is for learners to compile into their loops. A loop compares the statistic
+with a critical value and never computes a p-value. It need not count at all where the critical value is
+above the *ceiling* of the statistic, the greatest value that it can take given the two margins: G2 is at
+most 2 n times the smaller entropy, X2 at most n (r - 1) for the smaller number of seen states r. The
+critical value grows with the degrees of freedom, so few questions have a table much larger than n.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any, ClassVar, Literal, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import chdtrc, chdtri
+
+from generators.compiled import inlined, kernel, warm_up
+from generators.dataset import Dataset, code_dtype
+from generators.errors import InputError
+from harness.counts import (
+    MAX_PLANE_CELLS,
+    Columns,
+    Workspace,
+    append_column,
+    index_rows,
+    prepare,
+    split_planes,
+    tabulate_index,
+    tabulate_occurring,
+    tabulate_pair,
+    tabulate_planes,
+    workspace,
+)
+
+Test = Literal["g2", "pearson"]
+
+# Statistics come from sums whose rounding error is far below this, and it is far below any difference
+# that matters: at most this far above its critical value, a statistic counts as equal to it.
+ROUNDING = 1e-6
+
+
+@dataclass(frozen=True, slots=True)
+class TestResult:
+    """The outcome of a test of independence.
+
+    Parameters
+    ----------
+    statistic : float
+    df : int
+        Nominal degrees of freedom.
+    p_value : float
+        Of the chi-square distribution with `df` degrees of freedom; 1 where `df` is 0.
+    """
+
+    __test__: ClassVar[bool] = False  # pytest: the name begins with "Test", but this is none
+
+    statistic: float
+    df: int
+    p_value: float
+
+
+def independence_test(table: NDArray[np.integer[Any]], *, test: Test = "g2") -> TestResult:
+    """Test whether two variables are independent given a third, or given several taken as one.
+
+    Parameters
+    ----------
+    table : int array, shape (q, r_x, r_y)
+        Counts; the first axis is over all declared joint states of the conditioning variables (q = 1
+        where there are none), the others over the declared states of the two variables.
+    test : {"g2", "pearson"}
+
+    Returns
+    -------
+    TestResult
+
+    Raises
+    ------
+    InputError
+        If the table has not three axes, no cell, a negative count, or the test is unknown.
+
+    Examples
+    --------
+    Admission (columns) by sex (rows) at Berkeley in 1973, six departments taken together (Bickel,
+    Hammel and O'Connell 1975):
+
+    >>> result = independence_test(np.array([[[1198, 1493], [557, 1278]]]))
+    >>> round(result.statistic, 4), result.df
+    (93.4494, 1)
+    """
+    counts = np.asarray(table)
+    if counts.ndim != 3 or counts.size == 0 or counts.dtype.kind not in "iu" or counts.min() < 0:
+        raise InputError(
+            f"a table must hold counts on three axes (strata, x, y), none empty, got {counts.dtype} of "
+            f"shape {counts.shape}"
+        )
+    if test not in ("g2", "pearson"):
+        raise InputError(f"test must be one of g2, pearson, got {test!r}")
+    seen = counts.astype(np.float64)
+    strata = seen.sum(axis=(1, 2), keepdims=True)
+    expected = seen.sum(axis=2, keepdims=True) * seen.sum(axis=1, keepdims=True) / np.maximum(strata, 1)
+    possible = expected > 0
+    seen, expected = seen[possible], expected[possible]
+    if test == "g2":
+        statistic = 2 * float((seen * np.log(np.where(seen > 0, seen / expected, 1))).sum())
+    else:
+        statistic = float(((seen - expected) ** 2 / expected).sum())
+    q, r_x, r_y = counts.shape
+    df = q * (r_x - 1) * (r_y - 1)
+    statistic = max(statistic, 0.0) if df else 0.0
+    return TestResult(statistic, df, float(chdtrc(df, statistic)) if df else 1.0)
+
+
+class CriticalValues(NamedTuple):
+    """Critical values by degrees of freedom, in a form that kernels can search.
+
+    Parameters
+    ----------
+    df : float64 array, shape (k,)
+        Ascending.
+    value : float64 array, shape (k,)
+    """
+
+    df: NDArray[np.float64]
+    value: NDArray[np.float64]
+
+
+def critical_values(alpha: float, df: NDArray[Any]) -> NDArray[np.float64]:
+    """Return the values that a statistic must exceed to be significant.
+
+    Parameters
+    ----------
+    alpha : float
+        Strictly between 0 and 1.
+    df : array of numbers
+        At least 0; where it is 0, no value is significant: infinity.
+
+    Returns
+    -------
+    float64 array, shape of `df`
+        Upper `alpha` quantiles of the chi-square distribution.
+
+    Examples
+    --------
+    >>> critical_values(0.05, np.array([0, 1, 6])).round(2).tolist()
+    [inf, 3.84, 12.59]
+    """
+    if not 0 < alpha < 1:
+        raise InputError(f"alpha must be strictly between 0 and 1, got {alpha}")
+    degrees = np.asarray(df, dtype=np.float64)
+    return np.where(degrees > 0, chdtri(np.maximum(degrees, 1), alpha), np.inf)
+
+
+def attainable_critical_values(
+    alpha: float, cardinalities: NDArray[np.int64], n_given: int, ceiling: float
+) -> CriticalValues:
+    """Return the critical values of all tests given `n_given` variables that can be significant.
+
+    Parameters
+    ----------
+    alpha : float
+        Strictly between 0 and 1.
+    cardinalities : int64 array, shape (p,)
+        Declared states of each variable.
+    n_given : int
+        How many variables are conditioned on.
+    ceiling : float
+        The greatest value of the statistic; larger critical values are left out.
+
+    Returns
+    -------
+    CriticalValues
+        Exact, for all degrees of freedom that `cardinalities` allow.
+
+    Examples
+    --------
+    >>> attainable_critical_values(0.05, np.array([2, 3]), 1, 20.0).df.tolist()
+    [2.0, 3.0, 4.0, 6.0, 8.0]
+    """
+    sizes = np.unique(cardinalities).astype(np.float64)
+    sizes = sizes[sizes > 1]
+    df = np.unique(np.multiply.outer(sizes - 1, sizes - 1))
+    for given in range(n_given + 1):
+        value = critical_values(alpha, df)
+        df = df[value < ceiling]
+        if given < n_given:
+            df = np.unique(np.multiply.outer(df, sizes))
+    return CriticalValues(df, critical_values(alpha, df))
+
+
+def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:
+    """Return the greatest statistic that each variable can take part in, given its margin.
+
+    Parameters
+    ----------
+    columns : Columns
+    test : {"g2", "pearson"}
+
+    Returns
+    -------
+    float64 array, shape (p,)
+        No test of two variables, whatever is conditioned on, exceeds the smaller of their two values:
+        2 n times the entropy (for G2 is 2 n times an estimate of mutual information), or n times the
+        number of seen states less one (X2 / n is at most that, Cramer 1946).
+
+    Examples
+    --------
+    >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 1], [1, 1]], dtype=np.uint8))
+    >>> statistic_ceilings(prepare(data), "pearson").tolist()
+    [2.0, 0.0]
+    """
+    return _ceilings(columns, test == "pearson")
+
+
+def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
+    """Compute the statistic of every pair of variables, conditioned on nothing.
+
+    Parameters
+    ----------
+    columns : Columns
+    test : {"g2", "pearson"}
+        G2 is 2 n times the mutual information of the counts, in nats.
+
+    Returns
+    -------
+    float64 array, shape (p, p)
+        At [i, j] for i < j; 0 elsewhere.
+
+    Examples
+    --------
+    >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
+    >>> pair_statistics(prepare(data), "pearson").tolist()
+    [[0.0, 10.0], [0.0, 0.0]]
+    """
+    return _pair_statistics(columns, statistic_workspace(columns), test == "pearson")
+
+
+def dependent_pairs(columns: Columns, *, alpha: float, test: Test = "g2") -> NDArray[np.bool_]:
+    """Say which pairs of variables a test finds dependent, conditioned on nothing.
+
+    Parameters
+    ----------
+    columns : Columns
+    alpha : float
+        Strictly between 0 and 1.
+    test : {"g2", "pearson"}
+
+    Returns
+    -------
+    bool array, shape (p, p)
+        Symmetric, the diagonal False.
+
+    Examples
+    --------
+    >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
+    >>> dependent_pairs(prepare(data), alpha=0.01).tolist()
+    [[False, True], [True, False]]
+    """
+    sizes, kind = np.unique(columns.cardinalities, return_inverse=True)
+    limits = critical_values(alpha, np.multiply.outer(sizes - 1, sizes - 1)) + ROUNDING
+    above = pair_statistics(columns, test) > limits[np.ix_(kind, kind)]
+    return above | above.T
+
+
+def statistic_given(columns: Columns, x: int, y: int, given: Sequence[int], test: Test = "g2") -> float:
+    """Compute the statistic of two variables, conditioned on others.
+
+    Parameters
+    ----------
+    columns : Columns
+    x, y : int
+        Positions of two different variables.
+    given : sequence of int
+        Positions of other variables.
+    test : {"g2", "pearson"}
+
+    Returns
+    -------
+    float
+        What `independence_test` gives for the table over `given`, `x` and `y`, which may be of any size.
+
+    Examples
+    --------
+    >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
+    >>> statistic_given(prepare(data), 0, 1, [], "pearson")
+    10.0
+    """
+    variables = np.array(given, dtype=np.int64)
+    return _statistic_given(columns, variables, x, y, statistic_workspace(columns), test == "pearson")
+
+
+# What learners compile into their loops ---------------------------------------------------------------
+
+
+class StatisticWorkspace(NamedTuple):
+    """What `conditional_statistic` works with, made once per call of a learner by `statistic_workspace`.
+
+    Parameters
+    ----------
+    space : Workspace
+        Of the counting.
+    parts : int64 array, shape (2,)
+        How many joint states the base that stands in `space` has: on planes, by index. 0: not made yet;
+        -1: cannot be made.
+    x_log_x : float64 array, shape (n + 1,)
+        m log m for each count m.
+    margin : uint32 array, shape (max states,)
+    """
+
+    space: Workspace
+    parts: NDArray[np.int64]
+    x_log_x: NDArray[np.float64]
+    margin: NDArray[np.uint32]
+
+
+def statistic_workspace(columns: Columns) -> StatisticWorkspace:
+    """Allocate what tests on one dataset need: about 70 bytes a row and 0.1 MB."""
+    counts = np.arange(columns.codes.shape[1] + 1, dtype=np.float64)
+    return StatisticWorkspace(
+        space=workspace(columns),
+        parts=np.zeros(2, dtype=np.int64),
+        x_log_x=counts * np.log(np.maximum(counts, 1)),
+        margin=np.empty(int(columns.cardinalities.max(initial=1)), dtype=np.uint32),
+    )
+
+
+@inlined
+def critical_value(critical: CriticalValues, df: float) -> float:
+    """Return the critical value at `df`, one of those listed; above the last one, infinity."""
+    low, high = 0, critical.df.shape[0]
+    while low < high:
+        middle = (low + high) // 2
+        if critical.df[middle] < df:
+            low = middle + 1
+        else:
+            high = middle
+    return critical.value[low] if low < critical.df.shape[0] else np.inf
+
+
+@inlined
+def conditional_statistic(
+    columns: Columns, given: NDArray[np.int64], x: int, y: int, work: StatisticWorkspace, is_pearson: bool
+) -> float:
+    """Compute the statistic of x and y given others.
+
+    What depends on `given` and `x` alone is made once and kept for the calls that follow: the caller sets
+    ``work.parts[:] = 0`` whenever either changes.
+
+    Parameters
+    ----------
+    columns : Columns
+    given : int64 array, shape (k,)
+    x, y : int
+    work : StatisticWorkspace
+    is_pearson : bool
+        X2 if true, else G2.
+    """
+    r_x, r_y = columns.cardinalities[x], columns.cardinalities[y]
+    space, parts = work.space, work.parts
+    if parts[0] == 0:
+        parts[0] = split_planes(columns, given, x, space)
+    if 0 < parts[0] * r_x * r_y <= MAX_PLANE_CELLS and tabulate_planes(columns, y, parts[0] * r_x, space):
+        return _table_statistic(parts[0], r_x, r_y, work, is_pearson)
+    if parts[1] == 0:
+        parts[1] = index_rows(columns, given, space)
+        append_column(columns, x, space)
+    if tabulate_index(columns, y, parts[1] * r_x, space):
+        return _table_statistic(parts[1], r_x, r_y, work, is_pearson)
+    parts[1] = 0  # what follows overwrites the index
+    return _statistic_by_row(columns, given, x, y, space, is_pearson)
+
+
+@inlined
+def _table_statistic(n_parts: int, r_x: int, r_y: int, work: StatisticWorkspace, is_pearson: bool) -> float:
+    total = 0.0
+    for c in range(n_parts):
+        part = work.space.table[c * r_x * r_y : (c + 1) * r_x * r_y]
+        total += (
+            _x2_part(part, r_x, r_y, work.margin) if is_pearson else _g2_part(part, r_x, r_y, work.x_log_x)
+        )
+    return total
+
+
+@inlined
+def _g2_part(part: NDArray[np.uint32], r_x: int, r_y: int, x_log_x: NDArray[np.float64]) -> float:
+    total = 0.0
+    size = np.uint32(0)
+    for x in range(r_x):
+        row = part[x * r_y : (x + 1) * r_y]
+        row_size = np.uint32(0)
+        for y in range(r_y):
+            row_size += row[y]
+            total += x_log_x[row[y]]
+        total -= x_log_x[row_size]
+        size += row_size
+    for y in range(r_y):
+        column_size = np.uint32(0)
+        for x in range(r_x):
+            column_size += part[x * r_y + y]
+        total -= x_log_x[column_size]
+    return 2 * (total + x_log_x[size])
+
+
+@inlined
+def _x2_part(part: NDArray[np.uint32], r_x: int, r_y: int, margin: NDArray[np.uint32]) -> float:
+    size = np.uint32(0)
+    for y in range(r_y):
+        margin[y] = 0
+        for x in range(r_x):
+            margin[y] += part[x * r_y + y]
+        size += margin[y]
+    total = 0.0
+    for x in range(r_x):
+        row = part[x * r_y : (x + 1) * r_y]
+        row_size = np.uint32(0)
+        for y in range(r_y):
+            row_size += row[y]
+        if row_size > 0:
+            share = np.float64(row_size) / np.float64(size)
+            for y in range(r_y):
+                if margin[y] > 0:
+                    expected = share * np.float64(margin[y])
+                    total += (np.float64(row[y]) - expected) ** 2 / expected
+    return total
+
+
+@inlined
+def _statistic_by_row(
+    columns: Columns, given: NDArray[np.int64], x: int, y: int, space: Workspace, is_pearson: bool
+) -> float:
+    # For tables with many more cells than rows: with N / E of each row's cell, G2 = 2 sum log(N / E) and
+    # X2 = sum (N / E - 1), both over the rows. N / E = N_xyz N_z / (N_xz N_yz).
+    n, k = columns.codes.shape[1], given.shape[0]
+    ratio = np.ones(n)
+    variables = np.empty(k + 2, dtype=np.int64)
+    variables[:k] = given
+    for step in range(4):
+        variables[k] = x if step < 2 else y
+        variables[k + 1] = y
+        tabulate_occurring(columns, variables[: k + (2, 1, 1, 0)[step]], space)
+        for i in range(n):
+            rows = np.float64(space.table[space.index[i]])
+            ratio[i] = ratio[i] * rows if step == 0 or step == 3 else ratio[i] / rows
+    total = 0.0
+    for i in range(n):
+        total += ratio[i] - 1 if is_pearson else 2 * math.log(ratio[i])
+    return total
+
+
+# The kernels behind the functions above ---------------------------------------------------------------
+
+
+@kernel
+def _statistic_given(
+    columns: Columns, given: NDArray[np.int64], x: int, y: int, work: StatisticWorkspace, is_pearson: bool
+) -> float:
+    return conditional_statistic(columns, given, x, y, work, is_pearson)
+
+
+@kernel
+def _pair_statistics(columns: Columns, work: StatisticWorkspace, is_pearson: bool) -> NDArray[np.float64]:
+    p, n = columns.codes.shape
+    offsets, x_log_x = columns.offsets, work.x_log_x
+    statistics = np.zeros((p, p))
+    nothing = np.empty(0, dtype=np.int64)
+    # Half of G2 is sum N_xy log N_xy - sum N_x log N_x - sum N_y log N_y + n log n: here the middle two.
+    halves = np.zeros(p)
+    for v in range(p):
+        for size in columns.plane_sizes[offsets[v] : offsets[v + 1]]:
+            halves[v] += x_log_x[size]
+    for x in range(p):
+        work.parts[:] = 0
+        r_x = columns.cardinalities[x]
+        row = statistics[x]
+        for y in range(x + 1, p):
+            r_y = columns.cardinalities[y]
+            has_planes = offsets[x + 1] > offsets[x] and offsets[y + 1] > offsets[y]
+            if not has_planes or r_x * r_y > MAX_PLANE_CELLS:
+                row[y] = conditional_statistic(columns, nothing, x, y, work, is_pearson)
+                continue
+            table = work.space.table[: r_x * r_y]
+            tabulate_pair(columns, x, y, table)
+            if is_pearson:
+                row[y] = _x2_part(table, r_x, r_y, work.margin)
+            else:
+                half = x_log_x[n] - halves[x] - halves[y]
+                for c in range(table.shape[0]):
+                    half += x_log_x[table[c]]
+                row[y] = 2 * half
+    return statistics
+
+
+@kernel
+def _ceilings(columns: Columns, is_pearson: bool) -> NDArray[np.float64]:
+    p, n = columns.codes.shape
+    ceilings = np.zeros(p)
+    for v in range(p):
+        sizes = columns.plane_sizes[columns.offsets[v] : columns.offsets[v + 1]]
+        if sizes.shape[0] == 0:
+            sizes = np.zeros(columns.cardinalities[v], dtype=np.uint32)
+            for code in columns.codes[v]:
+                sizes[code] += np.uint32(1)
+        n_seen = 0
+        for size in sizes:
+            if size > 0:
+                n_seen += 1
+                ceilings[v] += 0.0 if is_pearson else 2 * size * math.log(n / size)
+        if is_pearson:
+            ceilings[v] = n * max(n_seen - 1, 0)
+    return ceilings
+
+
+@warm_up
+def _compile() -> None:
+    for n_states in (2, 300):
+        states = tuple(tuple(str(s) for s in range(r)) for r in (2, 2, n_states))
+        columns = prepare(Dataset(("a", "b", "c"), states, np.zeros((2, 3), dtype=code_dtype(n_states))))
+        statistic_ceilings(columns, "g2")
+        statistic_given(columns, 0, 1, [2])
+        dependent_pairs(columns, alpha=0.05)

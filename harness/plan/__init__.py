@@ -1,0 +1,1 @@
+"""Plans: reading one, crossing its factors, and the keys of everything that it asks for."""

@@ -1,0 +1,1 @@
+"""Scorers: numbers computed from a true network and a learned graph."""

@@ -1,0 +1,1 @@
+"""Studies: the only place where execution and analysis meet."""
