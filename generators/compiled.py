@@ -8,6 +8,7 @@ where nothing is writable, kernels are compiled in memory.
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import hashlib
 import os
@@ -18,8 +19,10 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 import numba
-from numba.core import config as numba_config
+from numba.core import config
 
+# numba's options live in a module whose attributes are made at run time.
+numba_config: Any = config
 Kernel = TypeVar("Kernel", bound=Callable[..., Any])
 
 CACHE_VARIABLE = "ARCASSAY_CACHE"
@@ -103,10 +106,8 @@ def _candidates() -> list[Path]:
         return [Path(chosen)]
     home_cache = os.environ.get("XDG_CACHE_HOME")
     candidates = [Path(home_cache)] if home_cache else []
-    try:
+    with contextlib.suppress(RuntimeError):  # no home folder is known
         candidates.append(Path.home() / ".cache")
-    except RuntimeError:  # no home folder is known
-        pass
     return candidates
 
 

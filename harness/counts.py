@@ -8,7 +8,7 @@ The lower half of this file holds the kernels that learners compile into their o
 tables that share a *base*, the joint states of some variables, at the cost of one pass each:
 
 - `split_planes` makes the planes of a base, and `tabulate_planes` counts one more variable within it;
-- `index_rows` and `append_column` number the rows by a base, and `tabulate_index` counts within it;
+- `number_rows` and `append_column` number the rows by a base, and `tabulate_numbers` counts within it;
 - `tabulate_pair` counts two variables, `tabulate_occurring` any number of them, however many states.
 
 Joint states that no row shows are left out of a base, so that it never has more parts than rows, however
@@ -18,8 +18,8 @@ large the product of the numbers of states is; nothing of the size of that produ
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from typing import Any, NamedTuple
+from collections.abc import Callable, Sequence
+from typing import Any, NamedTuple, cast
 
 import numpy as np
 from llvmlite import ir
@@ -106,7 +106,9 @@ def prepare(data: Dataset) -> Columns:
     codes.flags.writeable = False
     incomplete = _fill_planes(*columns)
     if incomplete >= 0:
-        raise InputError(f"variable {data.names[incomplete]!r} has missing cells; only complete rows are counted")
+        raise InputError(
+            f"variable {data.names[incomplete]!r} has missing cells; only complete rows are counted"
+        )
     for array in columns:
         array.flags.writeable = False
     return columns
@@ -159,8 +161,9 @@ def count_plain(columns: Columns, variables: Sequence[int]) -> NDArray[np.int64]
 def _shape(columns: Columns, chosen: NDArray[np.int64]) -> list[int]:
     shape: list[int] = columns.cardinalities[chosen].tolist()
     if math.prod(shape) > MAX_TABLE_CELLS:
+        cells = math.prod(shape)
         raise InputError(
-            f"a table over {len(shape)} variables would have {math.prod(shape)} cells; at most {MAX_TABLE_CELLS}"
+            f"a table over {len(shape)} variables would have {cells} cells; at most {MAX_TABLE_CELLS}"
         )
     return shape
 
@@ -177,10 +180,10 @@ class Workspace(NamedTuple):
         Planes of a base, from `split_planes`.
     base_sizes : uint32 array, shape (MAX_BASE_PLANES,)
         Rows in each of them.
-    index : uint32 array, shape (n,)
-        Numbers of the rows, from `index_rows`.
+    numbers : uint32 array, shape (n,)
+        A number for each row, from `number_rows`.
     ranks : uint32 array
-        For `index_rows`.
+        For `number_rows`.
     table : uint32 array, shape (about 8 n,)
         The last table counted; a table that does not fit is not counted but has to be taken apart with
         `tabulate_occurring`.
@@ -190,7 +193,7 @@ class Workspace(NamedTuple):
 
     base: NDArray[np.uint64]
     base_sizes: NDArray[np.uint32]
-    index: NDArray[np.uint32]
+    numbers: NDArray[np.uint32]
     ranks: NDArray[np.uint32]
     table: NDArray[np.uint32]
     private: NDArray[np.uint32]
@@ -204,7 +207,7 @@ def workspace(columns: Columns) -> Workspace:
     return Workspace(
         base=np.empty((MAX_BASE_PLANES, columns.planes.shape[1]), dtype=np.uint64),
         base_sizes=np.empty(MAX_BASE_PLANES, dtype=np.uint32),
-        index=np.empty(n, dtype=np.uint32),
+        numbers=np.empty(n, dtype=np.uint32),
         ranks=np.empty(4 * n + 2 * max_states + BLOCK_ROWS, dtype=np.uint32),
         table=np.empty(8 * n + max_states + BLOCK_ROWS, dtype=np.uint32),
         private=np.empty((4, MAX_PRIVATE_CELLS), dtype=np.uint32),
@@ -212,10 +215,7 @@ def workspace(columns: Columns) -> Workspace:
     )
 
 
-@intrinsic
-def popcount(typing_context: Any, word: Any) -> Any:
-    """Count the bits of a uint64: LLVM's ctpop, which it vectorises."""
-
+def _popcount(typing_context: Any, word: Any) -> Any:
     def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
         function = builder.module.declare_intrinsic("llvm.ctpop", [ir.IntType(64)])
         return builder.call(function, arguments)
@@ -223,13 +223,17 @@ def popcount(typing_context: Any, word: Any) -> Any:
     return types.uint64(types.uint64), generate
 
 
+# Counts the bits of a word, as one machine instruction that vectorises where the processor can.
+popcount = cast("Callable[[np.uint64], np.uint64]", intrinsic(_popcount))
+
+
 @inlined
-def plane_size(plane: NDArray[np.uint64]) -> int:
+def plane_size(plane: NDArray[np.uint64]) -> np.uint64:
     """Count the rows in a plane."""
-    total = np.uint64(0)
+    rows = np.uint64(0)
     for w in range(plane.shape[0]):
-        total += popcount(plane[w])
-    return total  # type: ignore[return-value]
+        rows += popcount(plane[w])
+    return rows
 
 
 @inlined
@@ -251,7 +255,7 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
     -------
     int
         How many joint states of the parents occur (1 without parents, and where there are no rows); -1
-        if there would be too many planes or a variable has none: then use `index_rows`.
+        if there would be too many planes or a variable has none: then use `number_rows`.
     """
     planes, offsets, base, sizes = columns.planes, columns.offsets, space.base, space.base_sizes
     k = parents.shape[0]
@@ -267,17 +271,9 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
                 base[s, :] = planes[first + s]
                 sizes[s] = columns.plane_sizes[first + s]
         else:
-            # From the last part to the first, so that each is read before its place is taken.
-            for c in range(n_parts - 1, -1, -1):
-                whole = base[c]
-                for s in range(r - 1, -1, -1):
-                    plane, part = planes[first + s], base[c * r + s]
-                    rows = np.uint64(0)
-                    for w in range(plane.shape[0]):
-                        word = whole[w] & plane[w]
-                        part[w] = word
-                        rows += popcount(word)
-                    sizes[c * r + s] = rows
+            _split_parts(base, n_parts, planes, first, r, 0, planes.shape[1])
+            for c in range(n_parts * r):
+                sizes[c] = plane_size(base[c])
         if j < k:
             n_split, n_parts = n_parts * r, 0
             for c in range(n_split):
@@ -289,6 +285,20 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
             if n_parts == 0:  # there are no rows: one empty part stands for them
                 n_parts = 1
     return n_parts
+
+
+@inlined
+def _split_parts(
+    base: NDArray[np.uint64], n_parts: int, planes: NDArray[np.uint64], first: int, r: int, start: int, end: int
+) -> None:
+    # Splits each part by the states of one more variable, planes `first` to `first + r - 1`, in place:
+    # from the last part to the first, so that each is read before its place is taken.
+    for c in range(n_parts - 1, -1, -1):
+        whole = base[c]
+        for s in range(r - 1, -1, -1):
+            plane, part = planes[first + s, start:end], base[c * r + s]
+            for w in range(plane.shape[0]):
+                part[w] = whole[w] & plane[w]
 
 
 @inlined
@@ -309,7 +319,7 @@ def tabulate_planes(columns: Columns, variable: int, n_planes: int, space: Works
     Returns
     -------
     bool
-        False, and nothing is counted, if the variable has no planes: then use `tabulate_index`.
+        False, and nothing is counted, if the variable has no planes: then use `tabulate_numbers`.
     """
     first = columns.offsets[variable]
     r = columns.offsets[variable + 1] - first
@@ -356,7 +366,7 @@ def _add_overlaps(
 
 
 @inlined
-def tabulate_pair(columns: Columns, first: int, second: int, table: NDArray[np.uint32]) -> None:
+def tabulate_pair(columns: Columns, first: int, second: int, table: NDArray[Any]) -> None:
     """Count two variables that both have planes.
 
     Only the cells without either's last state are counted; the others follow from the margins.
@@ -390,8 +400,8 @@ def tabulate_pair(columns: Columns, first: int, second: int, table: NDArray[np.u
 
 
 @inlined
-def index_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace) -> int:
-    """Number the rows by the joint state of some variables, in ``space.index``.
+def number_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace) -> int:
+    """Give each row a number by the joint state of some variables, in ``space.numbers``.
 
     Rows have the same number exactly if they agree in all variables. Joint states that do not occur get
     no number, except that up to `FEW_STATES` joint states are numbered as they are. Works for any
@@ -408,7 +418,7 @@ def index_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace)
     int
         All numbers are below this; it is at least 1 and at most max(n, `FEW_STATES`).
     """
-    index, room = space.index, space.ranks.shape[0]
+    index, room = space.numbers, space.ranks.shape[0]
     for i in range(index.shape[0]):
         index[i] = 0
     n_numbers = 1
@@ -432,11 +442,11 @@ def index_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace)
 
 @inlined
 def append_column(columns: Columns, variable: int, space: Workspace) -> None:
-    """Number the rows by their number so far and the state of one more variable.
+    """Give each row a number by its number so far and the state of one more variable.
 
     The new number is the old one times the variable's states, plus the state; it must stay below 2^32.
     """
-    index, column = space.index, columns.codes[variable]
+    index, column = space.numbers, columns.codes[variable]
     r = np.uint32(columns.cardinalities[variable])
     for i in range(index.shape[0]):
         index[i] = index[i] * r + np.uint32(column[i])
@@ -500,10 +510,10 @@ def _rank_by_sorting(
 
 
 @inlined
-def tabulate_index(columns: Columns, variable: int, n_numbers: int, space: Workspace) -> bool:
+def tabulate_numbers(columns: Columns, variable: int, n_numbers: int, space: Workspace) -> bool:
     """Count a variable within each number of the rows.
 
-    Fills ``space.table``: cell ``c * r + s`` is the number of rows with the number c in ``space.index``
+    Fills ``space.table``: cell ``c * r + s`` is the number of rows with the number c in ``space.numbers``
     and the variable, of r states, in state s.
 
     Parameters
@@ -519,7 +529,7 @@ def tabulate_index(columns: Columns, variable: int, n_numbers: int, space: Works
     bool
         False, and nothing is counted, if the table does not fit: then use `tabulate_occurring`.
     """
-    index, column, table = space.index, columns.codes[variable], space.table
+    index, column, table = space.numbers, columns.codes[variable], space.table
     n = index.shape[0]
     r = columns.cardinalities[variable]
     size = n_numbers * r
@@ -551,7 +561,7 @@ def tabulate_occurring(columns: Columns, variables: NDArray[np.int64], space: Wo
     """Count the joint states that occur, of any number of variables with any number of states.
 
     Fills the first cells of ``space.table`` with the number of rows in each joint state that occurs, in
-    an order of no meaning, among them at most `FEW_STATES` zeros; overwrites ``space.index``.
+    an order of no meaning, among them at most `FEW_STATES` zeros; overwrites ``space.numbers``.
 
     Parameters
     ----------
@@ -564,8 +574,8 @@ def tabulate_occurring(columns: Columns, variables: NDArray[np.int64], space: Wo
     int
         How many cells were filled; at least 1 and at most max(n, `FEW_STATES`).
     """
-    index, table = space.index, space.table
-    n_numbers = index_rows(columns, variables, space)
+    index, table = space.numbers, space.table
+    n_numbers = number_rows(columns, variables, space)
     _clear(table, n_numbers)
     for i in range(index.shape[0]):
         table[index[i]] += np.uint32(1)
@@ -611,9 +621,9 @@ def _fill_planes(
     n = codes.shape[1]
     for v in range(codes.shape[0]):
         column = codes[v]
-        highest = 0
+        highest = column.dtype.type(0)
         for i in range(n):
-            highest = max(highest, np.int64(column[i]))
+            highest = max(highest, column[i])
         if highest >= cardinalities[v]:
             return v
         first = offsets[v]
@@ -651,59 +661,25 @@ def _count(columns: Columns, variables: NDArray[np.int64], table: NDArray[np.int
 
 @inlined
 def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray[np.int64]) -> None:
-    # As `split_planes` and `tabulate_planes`, but block by block and with all joint states. The tables
-    # over the first 2, 3, ... variables stand one after another in `sums`; the last state of the last
-    # variable comes from the table before.
-    k = variables.shape[0]
+    # As `split_planes` and `tabulate_planes`, but block by block and with all joint states.
+    last = variables.shape[0] - 1
     n_words = columns.planes.shape[1]
-    n_sums, n_base, n_parts = 0, 1, 1
-    for j in range(k):
-        n_base = n_parts
-        n_parts *= columns.cardinalities[variables[j]]
-        n_sums += n_parts
-    sums = np.zeros(n_sums, dtype=np.int64)
-    base = np.empty((n_base, min(n_words, BLOCK_WORDS)), dtype=np.uint64)
+    r_last = columns.cardinalities[variables[last]]
+    base = np.empty((table.shape[0] // r_last, min(n_words, BLOCK_WORDS)), dtype=np.uint64)
     for start in range(0, n_words, BLOCK_WORDS):
         end = min(n_words, start + BLOCK_WORDS)
-        n_parts, at = 1, 0
-        for j in range(k):
+        n_parts = 1
+        for j in range(last + 1):
             first = columns.offsets[variables[j]]
             r = columns.cardinalities[variables[j]]
-            block = columns.planes[first : first + r, start:end]
             if j == 0:
-                base[:r, : end - start] = block
-            elif j < k - 1:
-                _split_block(base, n_parts, block, sums[at:])
+                base[:r, : end - start] = columns.planes[first : first + r, start:end]
+            elif j < last:
+                _split_parts(base, n_parts, columns.planes, first, r, start, end)
             else:
-                for s in range(r - 1):
-                    _add_overlaps(base, n_parts, block[s], sums[at + s :], r)
+                for s in range(r):
+                    _add_overlaps(base, n_parts, columns.planes[first + s, start:end], table[s:], r)
             n_parts *= r
-            at += n_parts
-    r = columns.cardinalities[variables[k - 1]]
-    leaf = sums[n_sums - n_base * r :]
-    for c in range(n_base):
-        rest = sums[n_sums - n_base * r - n_base + c]
-        for s in range(r - 1):
-            table[c * r + s] = leaf[c * r + s]
-            rest -= leaf[c * r + s]
-        table[c * r + r - 1] = rest
-
-
-@inlined
-def _split_block(
-    base: NDArray[np.uint64], n_parts: int, block: NDArray[np.uint64], sums: NDArray[np.int64]
-) -> None:
-    r = block.shape[0]
-    for c in range(n_parts - 1, -1, -1):
-        whole = base[c]
-        for s in range(r - 1, -1, -1):
-            plane, part = block[s], base[c * r + s]
-            rows = np.uint64(0)
-            for w in range(plane.shape[0]):
-                word = whole[w] & plane[w]
-                part[w] = word
-                rows += popcount(word)
-            sums[c * r + s] += np.int64(rows)
 
 
 @inlined

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from generators.graph import Graph
 
+
 class Status(StrEnum):
     """How a run ended."""
 

@@ -22,11 +22,19 @@ SEED_BITS = 32
 )
 @click.argument("data", type=click.Path(path_type=Path))
 @click.option("--method", help="A built-in method, or FILE.py:NAME, or package.module:NAME.")
-@click.option("--set", "settings", multiple=True, metavar="KEY=VALUE", help="A setting of the method; may be repeated.")
-@click.option("--from", "study", type=click.Path(path_type=Path), help="A study whose learner is to be applied.")
+@click.option(
+    "--set", "settings", multiple=True, metavar="KEY=VALUE", help="A setting of the method; may be repeated."
+)
+@click.option(
+    "--from", "study", type=click.Path(path_type=Path), help="A study whose learner is to be applied."
+)
 @click.option("--label", help="Which learner of the study.")
-@click.option("--seed", type=click.IntRange(0), help="Of the learner's randomness; drawn and printed if absent.")
-@click.option("-o", "--output", type=click.Path(path_type=Path), help="The graph to write: .csv, .graphml or .dot.")
+@click.option(
+    "--seed", type=click.IntRange(0), help="Of the learner's randomness; drawn and printed if absent."
+)
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), help="The graph to write: .csv, .graphml or .dot."
+)
 @shared_options
 def learn(
     data: Path,
@@ -86,7 +94,15 @@ def learn(
         write_graph(graph, output)
     if as_json:
         edges = [list(edge) for edge in graph.edges()]
-        print_json({"method": specification.name, "seed": seed, "rows": rows.n_rows, "edges": edges, "notes": list(notes)})
+        print_json(
+            {
+                "method": specification.name,
+                "seed": seed,
+                "rows": rows.n_rows,
+                "edges": edges,
+                "notes": list(notes),
+            }
+        )
     elif output is None:
         for source, target, kind in graph.edges():
             click.echo(f"{source} {'->' if kind == 'directed' else '-'} {target}")
@@ -95,7 +111,9 @@ def learn(
     return 0
 
 
-@click.command(epilog=examples("arcassay score truth.bif graph.csv", "arcassay score truth.csv graph.csv --json"))
+@click.command(
+    epilog=examples("arcassay score truth.bif graph.csv", "arcassay score truth.csv graph.csv --json")
+)
 @click.argument("truth", type=click.Path(path_type=Path))
 @click.argument("learned", type=click.Path(path_type=Path))
 @shared_options

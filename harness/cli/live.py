@@ -33,12 +33,17 @@ class LiveWatcher(Watcher):
     def compiling(self) -> None:
         """Say that the first start takes longer, and why."""
         self._compiling_since = time.monotonic()
-        say("Compiling the numerical kernels, once for this version and machine (about a minute) ...", quiet=self._quiet)
+        say(
+            "Compiling the numerical kernels, once for this version and machine (about a minute) ...",
+            quiet=self._quiet,
+        )
 
     def started(self, progress: Progress, n_kept: int) -> None:
         """Say what there is to do."""
         kept = f"; {n_kept:,} are in the ledger already" if n_kept else ""
-        workers = f" with {progress.n_workers} worker{'s' * (progress.n_workers > 1)}" if progress.total else ""
+        workers = (
+            f" with {progress.n_workers} worker{'s' * (progress.n_workers > 1)}" if progress.total else ""
+        )
         say(f"{progress.total:,} runs to do{workers}{kept}.", quiet=self._quiet)
 
     def advanced(self, progress: Progress) -> None:

@@ -61,7 +61,9 @@ def network() -> None:
 @click.option("--topology", default="random-order", show_default=True)
 @click.option("--cpts", default="dirichlet", show_default=True)
 @click.option("--states", default="2-3", show_default=True, help="Per variable: a number or a range.")
-@click.option("--set", "settings", multiple=True, metavar="KEY=VALUE", help="A setting of the topology or the CPTs.")
+@click.option(
+    "--set", "settings", multiple=True, metavar="KEY=VALUE", help="A setting of the topology or the CPTs."
+)
 @SEED
 @click.option("-o", "--output", type=click.Path(path_type=Path), required=True, help="FILE.bif or FILE.json.")
 @shared_options
@@ -90,7 +92,10 @@ def generate(
     of_topology = set(TOPOLOGIES[topology].settings) if topology in TOPOLOGIES else set()
     rng = np.random.default_rng(seed)
     graph = generate_graph(
-        topology, variables=variables, rng=rng, **{k: v for k, v in given.items() if k in of_topology or k not in own}
+        topology,
+        variables=variables,
+        rng=rng,
+        **{k: v for k, v in given.items() if k in of_topology or k not in own},
     )
     drawn = generate_network(
         graph, cpts=cpts, states=states, rng=rng, **{k: v for k, v in given.items() if k in own}
@@ -101,7 +106,9 @@ def generate(
     say(f"Wrote {output}: {_facts_line(drawn)}.", quiet=quiet or as_json)
 
 
-@network.command("show", epilog=examples("arcassay network show alarm.bif", "arcassay network show chest-clinic --json"))
+@network.command(
+    "show", epilog=examples("arcassay network show alarm.bif", "arcassay network show chest-clinic --json")
+)
 @click.argument("file")
 @shared_options
 def show(file: str, as_json: bool, quiet: bool) -> None:
@@ -118,12 +125,18 @@ def show(file: str, as_json: bool, quiet: bool) -> None:
     wide = max(len(name) for name in found.names)
     for name, own in zip(found.names, found.states, strict=True):
         parents = found.cpts[name].parents
-        click.echo(_folded(f"  {name:{wide}}  ", " | ".join(own) + (f"  from {', '.join(parents)}" if parents else "")))
+        click.echo(
+            _folded(
+                f"  {name:{wide}}  ", " | ".join(own) + (f"  from {', '.join(parents)}" if parents else "")
+            )
+        )
 
 
 @network.command(
     "convert",
-    epilog=examples("arcassay network convert alarm.bif alarm.json", "arcassay network convert chest-clinic clinic.bif"),
+    epilog=examples(
+        "arcassay network convert alarm.bif alarm.json", "arcassay network convert chest-clinic clinic.bif"
+    ),
 )
 @click.argument("source")
 @click.argument("target", type=click.Path(path_type=Path))
@@ -152,7 +165,9 @@ def convert(source: str, target: Path, as_json: bool, quiet: bool) -> None:
 @click.argument("file")
 @click.option("--rows", type=click.IntRange(0, 10**9), required=True)
 @SEED
-@click.option("-o", "--output", type=click.Path(path_type=Path), required=True, help="FILE.csv or FILE.csv.gz.")
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), required=True, help="FILE.csv or FILE.csv.gz."
+)
 @shared_options
 def sample(file: str, rows: int, seed: int | None, output: Path, as_json: bool, quiet: bool) -> None:
     """Draw independent rows from a network and write them."""
@@ -209,7 +224,11 @@ def _facts_line(found: Network) -> str:
 
 def _folded(start: str, text: str) -> str:
     indent = " " * min(len(start), 24)
-    return textwrap.fill(text, width(), initial_indent=start, subsequent_indent=indent) if text else start.rstrip()
+    return (
+        textwrap.fill(text, width(), initial_indent=start, subsequent_indent=indent)
+        if text
+        else start.rstrip()
+    )
 
 
 def _record_text(record: dict[str, Any]) -> str:

@@ -73,10 +73,12 @@ class LazyGroup(click.Group):
                 formatter.write_dl([(name, line) for name, (_, line) in section.items()])
 
 
-@click.group(cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(
+    cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}
+)
 @click.version_option(package_name="arcassay", message="%(version)s")
 def cli() -> None:
-    """Rehearse a Bayesian-network structure-learning study on synthetic data.
+    r"""Rehearse a Bayesian-network structure-learning study on synthetic data.
 
     Before real data is touched: how many rows, which learner, how long - each with its uncertainty.
     Start with "arcassay demo", or with "arcassay draft --variables 12 -o plan.toml".

@@ -15,7 +15,9 @@ if TYPE_CHECKING:
 
 STUDY = click.argument("study", type=click.Path(path_type=Path))
 LEDGER = click.option(
-    "--ledger", type=click.Path(path_type=Path), help="The ledger, where it is not NAME.ledger beside NAME.toml."
+    "--ledger",
+    type=click.Path(path_type=Path),
+    help="The ledger, where it is not NAME.ledger beside NAME.toml.",
 )
 WORKERS = click.option(
     "--workers", type=click.IntRange(1, 1024), help="Runs at a time; one per core if not given."
@@ -48,8 +50,12 @@ def demo(folder: Path, workers: int | None, as_json: bool, quiet: bool) -> int:
 @click.command(
     epilog=examples("arcassay draft --variables 12 -o plan.toml", "arcassay draft --variables 40 > plan.toml")
 )
-@click.option("--variables", type=click.IntRange(2, 5000), required=True, help="How many variables the study has.")
-@click.option("-o", "--output", type=click.Path(path_type=Path), help="The plan to write; standard output if absent.")
+@click.option(
+    "--variables", type=click.IntRange(2, 5000), required=True, help="How many variables the study has."
+)
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), help="The plan to write; standard output if absent."
+)
 @shared_options
 def draft(variables: int, output: Path | None, as_json: bool, quiet: bool) -> None:
     """Write a commented plan that passes `check`, to be adapted."""
@@ -102,7 +108,9 @@ def run(plan: Path, ledger: Path | None, workers: int | None, as_json: bool, qui
 @click.command(epilog=examples("arcassay report plan.toml", "arcassay report plan.ledger -o winter.html"))
 @STUDY
 @LEDGER
-@click.option("-o", "--output", type=click.Path(path_type=Path), help="The page to write; NAME.html if absent.")
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), help="The page to write; NAME.html if absent."
+)
 @shared_options
 def report(study: Path, ledger: Path | None, output: Path | None, as_json: bool, quiet: bool) -> None:
     """Write the self-contained report of a study, and print its first screen."""
@@ -112,11 +120,18 @@ def report(study: Path, ledger: Path | None, output: Path | None, as_json: bool,
     _report(found, output or found.with_suffix(".html"), as_json, quiet)
 
 
-@click.command(epilog=examples("arcassay export plan.toml -o runs.csv", "arcassay export plan.toml --table conditions"))
+@click.command(
+    epilog=examples("arcassay export plan.toml -o runs.csv", "arcassay export plan.toml --table conditions")
+)
 @STUDY
 @LEDGER
 @click.option("--table", type=click.Choice(["runs", "conditions"]), default="runs", show_default=True)
-@click.option("-o", "--output", type=click.Path(path_type=Path), help="FILE.csv or FILE.parquet; CSV on standard output if absent.")
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(path_type=Path),
+    help="FILE.csv or FILE.parquet; CSV on standard output if absent.",
+)
 @shared_options
 def export(
     study: Path, ledger: Path | None, table: str, output: Path | None, as_json: bool, quiet: bool
@@ -128,7 +143,9 @@ def export(
     found = read_study(find_ledger(study, ledger))
     if output is None:
         if as_json:
-            raise InputError("export: --json needs -o FILE; without it the table itself goes to standard output")
+            raise InputError(
+                "export: --json needs -o FILE; without it the table itself goes to standard output"
+            )
         click.echo(table_text(found, table), nl=False)
         return
     n_rows = export_table(found, table, output)
@@ -154,7 +171,9 @@ def status(study: Path, ledger: Path | None, as_json: bool, quiet: bool) -> None
         click.echo(line)
 
 
-@click.command(epilog=examples("arcassay rerun plan.toml 3fa29c01d7be", "arcassay rerun plan.toml 3fa29c01d7be --json"))
+@click.command(
+    epilog=examples("arcassay rerun plan.toml 3fa29c01d7be", "arcassay rerun plan.toml 3fa29c01d7be --json")
+)
 @click.argument("study", type=click.Path(path_type=Path))
 @click.argument("run_name", metavar="RUN")
 @LEDGER
@@ -191,7 +210,9 @@ def _run_and_report(
     _say_ending(summary, plan, quiet)
     if summary.was_stopped:
         if as_json:
-            print_json({"stopped": True, "done": summary.n_done, "asked": summary.n_asked, "ledger": str(place)})
+            print_json(
+                {"stopped": True, "done": summary.n_done, "asked": summary.n_asked, "ledger": str(place)}
+            )
         return 130
     _report(place, page, as_json, quiet)
     return 0
@@ -202,10 +223,13 @@ def _say_ending(summary: RunSummary, plan: Path, quiet: bool) -> None:
 
     if summary.was_stopped:
         complain(
-            f"stopped with {summary.n_done:,} of {summary.n_asked:,} runs done. To resume: arcassay run {plan}"
+            f"stopped with {summary.n_done:,} of {summary.n_asked:,} runs done. "
+            f"To resume: arcassay run {plan}"
         )
     elif summary.n_asked:
-        say(f"{summary.n_done:,} runs in {time_span(summary.seconds)}, kept in {summary.ledger}.", quiet=quiet)
+        say(
+            f"{summary.n_done:,} runs in {time_span(summary.seconds)}, kept in {summary.ledger}.", quiet=quiet
+        )
 
 
 def _report(ledger: Path, page: Path | None, as_json: bool, quiet: bool) -> None:

@@ -98,7 +98,9 @@ class LocalEngine:
         """Finish what is running, and nothing more."""
         self._is_stopping = True
 
-    def batches(self, works: Iterator[Work], on_ready: Callable[[], None] | None = None) -> Iterator[list[Event]]:
+    def batches(
+        self, works: Iterator[Work], on_ready: Callable[[], None] | None = None
+    ) -> Iterator[list[Event]]:
         """Do all work and yield its events in batches, an empty one when there was nothing to wait for.
 
         Parameters
@@ -172,9 +174,7 @@ class LocalEngine:
         self._note(worker, word, rest, on_ready)
         return []
 
-    def _note(
-        self, worker: _Worker, word: str, rest: list[Any], on_ready: Callable[[], None] | None
-    ) -> None:
+    def _note(self, worker: _Worker, word: str, rest: list[Any], on_ready: Callable[[], None] | None) -> None:
         if word == "ready":
             worker.is_ready = True
             if len(self._workers) == 1:
@@ -223,7 +223,7 @@ class LocalEngine:
 
     def _start(self) -> _Worker:
         ours, theirs = socket.socketpair()
-        errors = tempfile.TemporaryFile()
+        errors = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the worker lives
         environment = {**os.environ, **dict.fromkeys(THREAD_VARIABLES, str(self._threads))}
         try:
             process = subprocess.Popen(

@@ -54,7 +54,9 @@ class Material:
     def drawn_dataset(self) -> DrawnDataset:
         """The dataset as the ledger stores it."""
         view_digest = digest("view", self.view.words())
-        return DrawnDataset(self.work.dataset_key, self.work.index, canonical_json(self.work.data), view_digest)
+        return DrawnDataset(
+            self.work.dataset_key, self.work.index, canonical_json(self.work.data), view_digest
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,9 +113,7 @@ def timed_call(specification: Specification, material: Material, request: Reques
 
 def scored(material: Material, learner: Learner, timed: Timed) -> Outcome:
     """Score a learner's graph against the truth."""
-    scores = score_answer(
-        material.truth, timed.graph, returns=learner.returns, directions=learner.directions
-    )
+    scores = score_answer(material.truth, timed.graph, returns=learner.returns, directions=learner.directions)
     return Outcome(
         Status.DONE,
         graph=timed.graph,

@@ -73,7 +73,9 @@ def fork_runner(main: Callable[[Connection], None], connection: Connection, outp
     raise AssertionError("not reached")
 
 
-def serve_many(learners: tuple[Learner, ...], specifications: Mapping[int, Specification]) -> Callable[[Connection], None]:
+def serve_many(
+    learners: tuple[Learner, ...], specifications: Mapping[int, Specification]
+) -> Callable[[Connection], None]:
     """Return the main function of a runner that takes run after run of built-in learners."""
 
     def main(connection: Connection) -> None:
@@ -91,7 +93,9 @@ def serve_many(learners: tuple[Learner, ...], specifications: Mapping[int, Speci
             if command == "learn":
                 _send(connection, event="calling")
                 try:
-                    outcome = scored(material, learner, timed_call(specifications[request.learner], material, request))
+                    outcome = scored(
+                        material, learner, timed_call(specifications[request.learner], material, request)
+                    )
                 except Exception as error:
                     outcome = failed(error)
             else:

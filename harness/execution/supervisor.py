@@ -1,8 +1,9 @@
 """The process that watches runs from outside: it forks, waits, and at a limit kills.
 
-Started by the main process with one end of a connection as an open file. It never calls a learner itself, so nothing a learner does can keep
-it from watching. When the main process is gone, the connection ends, and it takes its runners with it;
-runners in turn die with it. On Linux it also adopts whatever a learner leaves behind, and ends it.
+Started by the main process with one end of a connection as an open file. It never calls a learner
+itself, so nothing a learner does can keep it from watching. When the main process is gone, the
+connection ends, and it takes its runners with it; runners in turn die with it. On Linux it also adopts
+whatever a learner leaves behind, and ends it.
 """
 
 from __future__ import annotations
@@ -153,7 +154,9 @@ class Supervisor:
         reply, outcome = self._watch(runner, learner)
         return outcome if reply is None else outcome_from(reply, names)
 
-    def _run_alone(self, work: Work, position: int, learner: Learner, names: tuple[str, ...]) -> Outcome | None:
+    def _run_alone(
+        self, work: Work, position: int, learner: Learner, names: tuple[str, ...]
+    ) -> Outcome | None:
         runner = self._fork(serve_one(learner, work, position))
         try:
             reply, outcome = self._watch(runner, learner)
@@ -171,7 +174,9 @@ class Supervisor:
 
     # Watching ---------------------------------------------------------------------------------------
 
-    def _watch(self, runner: _Runner, learner: Learner | None) -> tuple[dict[str, Any] | None, Outcome | None]:
+    def _watch(
+        self, runner: _Runner, learner: Learner | None
+    ) -> tuple[dict[str, Any] | None, Outcome | None]:
         """Wait for a runner's answer, holding it to a learner's limits.
 
         Returns
@@ -186,8 +191,12 @@ class Supervisor:
         while True:
             left = None if learner is None else began + learner.limits.seconds - time.monotonic()
             if left is not None and learner is not None and left <= 0:
-                return None, self._stop(runner, Status.TIMEOUT, f"over {learner.limits.seconds:g} seconds", learner, load)
-            ready = wait([self._main, runner.connection], POLL_SECONDS if left is None else min(POLL_SECONDS, left))
+                return None, self._stop(
+                    runner, Status.TIMEOUT, f"over {learner.limits.seconds:g} seconds", learner, load
+                )
+            ready = wait(
+                [self._main, runner.connection], POLL_SECONDS if left is None else min(POLL_SECONDS, left)
+            )
             if self._main in ready:
                 self._take_message()
             if runner.connection in ready:

@@ -15,7 +15,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-from arcassay._own import foreign_package
+from ._own import foreign_package
 
 if TYPE_CHECKING:
     from generators.cpts import generate_network as generate_network
@@ -38,7 +38,7 @@ if TYPE_CHECKING:
     from harness.records import Declined as Declined
     from harness.scorers.structure import score as score
     from harness.studies.applying import learn as learn
-    from harness.studies.running import run_plan as run
+    from harness.studies.running import run_plan as run  # noqa: F401
 
 _PUBLIC = {
     "Answer": "harness.records:Answer",

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import sys
 
-from arcassay._own import foreign_package
+from ._own import foreign_package
 
 # Before numpy is imported by anything: learners are timed on one thread, and so is what surrounds them.
 _THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMEXPR_NUM_THREADS")

@@ -24,7 +24,20 @@ from harness.records import Answer, Declined
 RETURNS = ("dag", "cpdag", "pdag", "skeleton")
 DIRECTIONS = ("class", "causal")
 NOT_SETTINGS = frozenset(
-    {"method", "label", "source", "command", "vary", "base", "threads", "seconds", "memory_mb", "data", "rng", "knowledge"}
+    {
+        "method",
+        "label",
+        "source",
+        "command",
+        "vary",
+        "base",
+        "threads",
+        "seconds",
+        "memory_mb",
+        "data",
+        "rng",
+        "knowledge",
+    }
 )
 ATTRIBUTE = "__arcassay_learner__"
 
@@ -128,7 +141,9 @@ def learner(
     if returns not in RETURNS:
         raise InputError(f"learner {name!r}: returns must be one of {', '.join(RETURNS)}, got {returns!r}")
     if directions not in DIRECTIONS:
-        raise InputError(f"learner {name!r}: directions must be one of {', '.join(DIRECTIONS)}, got {directions!r}")
+        raise InputError(
+            f"learner {name!r}: directions must be one of {', '.join(DIRECTIONS)}, got {directions!r}"
+        )
 
     def attach(function: Function) -> Function:
         specification = Specification(
@@ -231,7 +246,8 @@ def _to_graph(returned: Any, names: tuple[str, ...]) -> Graph:
     except InputError as error:
         raise InvalidAnswer(str(error)) from None
     raise InvalidAnswer(
-        f"a learner must return a Graph, a networkx.DiGraph or an edge-list frame, got {type(returned).__name__}"
+        "a learner must return a Graph, a networkx.DiGraph or an edge-list frame, "
+        f"got {type(returned).__name__}"
     )
 
 

@@ -35,7 +35,9 @@ class WriterLock:
             except OSError:
                 holder = os.pread(self._file, 200, 0).decode(errors="replace").strip() or "another process"
                 os.close(self._file)
-                raise MachineStop(f"{ledger}: is being written by {holder}; wait for it, or stop it") from None
+                raise MachineStop(
+                    f"{ledger}: is being written by {holder}; wait for it, or stop it"
+                ) from None
             if self._is_the_file():
                 break
             os.close(self._file)  # its last holder removed it between our two calls: take a fresh one

@@ -194,7 +194,12 @@ class Ledger:
         """Store a session and return its number."""
         with _naming(self.path):
             session = self._insert(
-                "session", host=host, cpu=cpu, versions=canonical_json(versions), workers=workers, started=now()
+                "session",
+                host=host,
+                cpu=cpu,
+                versions=canonical_json(versions),
+                workers=workers,
+                started=now(),
             )
         self.commit()
         return session
@@ -205,7 +210,9 @@ class Ledger:
             self._execute("UPDATE session SET ended = ?, ending = ? WHERE id = ?", (now(), ending, session))
         self.commit()
 
-    def store_plan(self, text: str, digest: bytes, expansion: Mapping[str, Any], learners: Sequence[Learner]) -> int:
+    def store_plan(
+        self, text: str, digest: bytes, expansion: Mapping[str, Any], learners: Sequence[Learner]
+    ) -> int:
         """Store a plan's text, what it expands to and its labels; a known plan becomes the newest again."""
         started = now()
         with _naming(self.path):
@@ -298,7 +305,8 @@ class Ledger:
         with _naming(self.path):
             learner_id = self._learner_id(learner)
             row = self._execute(
-                "SELECT id FROM run WHERE dataset = ? AND rows = ? AND learner = ?", (dataset, rows, learner_id)
+                "SELECT id FROM run WHERE dataset = ? AND rows = ? AND learner = ?",
+                (dataset, rows, learner_id),
             ).fetchone()
             if row is None:
                 run = self._insert("run", dataset=dataset, rows=rows, learner=learner_id, **fields)
@@ -369,7 +377,8 @@ class Ledger:
         query = (
             "SELECT run.id AS run, network.key AS network, network.replicate AS replicate, "
             "network.graph AS network_graph, dataset.key AS dataset, dataset.distortions AS distortions, "
-            "run.rows AS rows, learner.key AS learner, learner.method AS method, learner.settings AS settings, "
+            "run.rows AS rows, learner.key AS learner, learner.method AS method, "
+            "learner.settings AS settings, "
             "learner.returns AS returns, run.status AS status, run.cause AS cause, run.graph AS graph, "
             "run.extendable AS extendable, run.wall_seconds AS wall_seconds, run.cpu_seconds AS cpu_seconds, "
             "run.peak_rss_mb AS peak_rss_mb, run.limits AS limits, run.session AS session, "
@@ -436,7 +445,8 @@ class Ledger:
 
         earlier = [session["versions"].get("numpy", "?") for session in self.sessions()[:1]]
         return (
-            f"{self.path}: {what} is drawn differently today (numpy {np.__version__}) than when the ledger was "
+            f"{self.path}: {what} is drawn differently today (numpy {np.__version__}) than when the ledger "
+            "was "
             f"begun (numpy {', '.join(earlier) or '?'}). Continue with that version, or start a new ledger."
         )
 
@@ -523,7 +533,9 @@ def _naming(path: Path) -> Iterator[None]:
     try:
         yield
     except sqlite3.DatabaseError as error:
-        if error.sqlite_errorcode & 0xFF not in _MACHINE_CODES:  # the primary code; the rest would be bugs of ours
+        if (
+            error.sqlite_errorcode & 0xFF not in _MACHINE_CODES
+        ):  # the primary code; the rest would be bugs of ours
             raise
         raise MachineStop(
             f"{path}: {error}. What was committed before is safe; run again to resume"

@@ -29,7 +29,7 @@ MAX_CELLS = 1 << 33  # of one dataset: 8 GiB at a byte per cell
 MAX_TEXT = 1 << 20  # characters of a plan
 
 TITLE = Setting("title", str)
-SEED = Setting("seed", int, 1, bounds=Between(0, 2**63 - 1))
+SEED = Setting("seed", int, 1, bounds=Between(0))
 ROWS = Setting("rows", int, bounds=Between(1))
 _BETWEEN = Between(0, 1, inside=True)
 REQUIREMENT = (
@@ -148,6 +148,8 @@ def parse_plan(text: str, path: Path | None = None) -> Plan:
     folder = Path() if path is None else path.parent
     faults = Faults(name)
     top = Section("", _parsed(text, name), faults)
+    _refuse_long_integers("", top.content, faults)
+    faults.stop()
     top.refuse_unknown(SECTIONS)
     title = top.read(TITLE)
     seed = top.read(SEED, SEED.default)
@@ -206,6 +208,19 @@ def _parsed(text: str, name: str) -> dict[str, Any]:
         raise InputError(f"{name}: {' '.join(str(error).split())}.") from None
     except RecursionError:
         raise InputError(f"{name}: is nested too deeply.") from None
+
+
+def _refuse_long_integers(place: str, value: Any, faults: Faults) -> None:
+    """Note whole numbers beyond 64 bits: TOML has none, and no message could print the longest."""
+    if isinstance(value, dict):
+        section = Section(place, value, faults)
+        for key, item in value.items():
+            _refuse_long_integers(section.where(key), item, faults)
+    elif isinstance(value, list):
+        for position, item in enumerate(value, start=1):
+            _refuse_long_integers(f"{place}[{position}]", item, faults)
+    elif isinstance(value, int) and not -(2**63) <= value < 2**63:
+        faults.add(place, "must be a number of at most 64 bits")
 
 
 def _read_rows(data: Section) -> tuple[int, ...]:

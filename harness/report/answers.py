@@ -12,13 +12,13 @@ from harness.analysis.runs import Runs
 from harness.records import Condition
 from harness.report import sentences
 from harness.report.evidence import (
-    HEADLINE,
     FigureFacts,
     condition_figures,
     failures_table,
     growth_figures,
+    headline_column,
+    headline_measures,
     learners_table,
-    measure_column,
     measures_glossary,
     measures_table,
     undefined_table,
@@ -179,8 +179,8 @@ def _condition(
         grid = grid_answers(shares, facts.requirement.assurance)
         lines = _grid_lines(grid, facts)
     else:
-        decimals = {measure: measure_column(measure, last).decimals for measure in HEADLINE}
-        lines = tuple(sentences.performance(summary, HEADLINE, decimals) for summary in last)
+        columns = [headline_column(measure) for measure in headline_measures(last)]
+        lines = tuple(sentences.performance(summary, columns) for summary in last)
     unit, n_units = summaries[0].unit, max(summary.n_units for summary in summaries)
     return ConditionAnswers(
         index,
@@ -214,7 +214,7 @@ def _grid_lines(grid: Sequence[GridAnswer], facts: StudyFacts) -> tuple[str, ...
         if answer.label in facts.baselines and answer.best is None and answer.largest is not None
     ]
     lines = [sentences.grid_answer(answer, facts.requirement) for answer in grid if answer not in idle]
-    return (*lines, *([sentences.baselines(idle)] if idle else []))
+    return (*lines, *([sentences.baselines(idle, facts.requirement)] if idle else []))
 
 
 def _notices(

@@ -101,7 +101,7 @@ def learners_table(
     by_rows : bool
         Whether lines of several row counts stand in the table, so that it needs a column of them.
     """
-    measures = [measure for measure in HEADLINE if summaries and measure in summaries[0].measures]
+    measures = headline_measures(summaries)
     silent = "skeleton_precision" in measures and any(
         summary.measures["skeleton_precision"].share_undefined > 0 for summary in summaries
     )
@@ -110,9 +110,9 @@ def learners_table(
     if shares:
         columns.append(Column("met", "share meeting the requirement"))
     for measure in measures:
-        columns.append(measure_column(measure, summaries))
+        columns.append(headline_column(measure))
         if measure == "skeleton_precision" and silent:
-            columns.append(Column("precision_undefined", "precision undefined"))
+            columns.append(Column("without_edge", "no edge"))
     columns += [Column("failed", "failed"), Column("seconds", "median s")]
 
     rows: list[tuple[Value, ...]] = []
@@ -130,12 +130,22 @@ def learners_table(
     notes = [sentences.IN_BRACKETS]
     if silent:
         notes.append(
-            "A mean precision leaves out the finished runs that claimed no edge: their share stands beside "
-            "it."
+            "A mean precision leaves out the finished runs that claimed no edge; their share stands under "
+            '"no edge".'
         )
     if any(summary.durations.n_timeouts for summary in summaries):
         notes.append("Median times count a timed-out run as longer than its limit (Kaplan and Meier 1958).")
     return Table(key, title, tuple(columns), tuple(rows), tuple(notes))
+
+
+def headline_column(measure: str) -> Column:
+    """Return the column of a measure in the table of learners: few decimals, narrow."""
+    return Column(measure, measure_title(measure), decimals=1 if is_count(measure) else 2)
+
+
+def headline_measures(summaries: Sequence[Summary]) -> list[str]:
+    """Return the measures that the table of learners shows, as far as the runs have them."""
+    return [measure for measure in HEADLINE if summaries and measure in summaries[0].measures]
 
 
 def measure_column(measure: str, summaries: Sequence[Summary]) -> Column:
@@ -197,10 +207,10 @@ def failures_table(frame: pd.DataFrame, where: Mapping[int, str]) -> Table:
     frame : pandas.DataFrame
         Settled runs.
     where : mapping of int to str
-        Condition -> its heading.
+        Condition -> its heading; with a single one the table names none.
     """
     columns = (
-        Column("condition", "condition", is_number=False),
+        *([Column("condition", "condition", is_number=False)] if len(where) > 1 else []),
         Column("label", "learner", is_number=False),
         Column("status", "status", is_number=False),
         Column("cause", "cause", is_number=False),
@@ -215,7 +225,14 @@ def failures_table(frame: pd.DataFrame, where: Mapping[int, str]) -> Table:
         groups.setdefault(key, []).append(int(at_rows))
     counted = sorted(groups.items(), key=lambda group: (-len(group[1]), group[0]))
     lines: list[tuple[Value, ...]] = [
-        (where[condition], label, status, cause, len(rows), _range(rows))
+        (
+            *([where[condition]] if len(where) > 1 else []),
+            label,
+            status,
+            cause or "no cause given",
+            len(rows),
+            _range(rows),
+        )
         for (condition, label, status, cause), rows in counted[:MAX_FAILURE_LINES]
     ]
     rest = counted[MAX_FAILURE_LINES:]

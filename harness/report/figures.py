@@ -20,7 +20,7 @@ from matplotlib.transforms import IdentityTransform
 from numpy.typing import NDArray
 
 from harness.report.evidence import FigureFacts
-from harness.report.tables import on_one_line, short
+from harness.report.tables import on_one_line
 
 INK = "#123456"  # stands for the page's text colour until the SVG is done
 QUIET = "#654321"  # for lines that only help
@@ -47,7 +47,7 @@ SIZE = (7.2, 3.7)  # inches
 FONT_SIZE = 9.0
 LABEL_GAP = 12.0  # points between two labels
 MAX_LABEL = 22  # characters
-LABEL_ROOM = 0.28  # of the figure's width, right of the axes
+AXES = (0.12, 0.13, 0.6, 0.83)  # left, bottom, width, height as shares; labels stand to the right
 
 
 class _Style(NamedTuple):
@@ -91,16 +91,13 @@ def draw(figure: FigureFacts) -> str:
     out = io.StringIO()
     with mpl.rc_context(settings), warnings.catch_warnings():
         warnings.filterwarnings("ignore", message="Glyph .* missing")  # the page's fonts draw the text
-        canvas = Figure(figsize=SIZE, dpi=72, layout="constrained")  # a pixel is a point
-        canvas.get_layout_engine().set(rect=(0, 0, 1 - LABEL_ROOM, 1))  # type: ignore[union-attr, call-arg]
-        axes = canvas.add_subplot()
+        canvas = Figure(figsize=SIZE, dpi=72)  # a pixel is a point
+        axes = canvas.add_axes(AXES)
         _prepare(axes, figure)
         all_series = _series(figure)
         for series in all_series:
             _draw_series(axes, figure, series)
         _scale(axes, figure, all_series)
-        canvas.draw_without_rendering()
-        canvas.set_layout_engine("none")
         _label_directly(axes, all_series)
         canvas.savefig(out, format="svg", transparent=True, metadata={"Date": None})
     return _fit_for_page(out.getvalue(), figure, salt)
@@ -172,7 +169,7 @@ def _scale(axes: Axes, figure: FigureFacts, all_series: Sequence[_Series]) -> No
     if len(places) == 1:
         axes.set_xlim(places[0] / 2, places[0] * 2)
     if figure.kind == "time":
-        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: short(value)))
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.10g}"))
         axes.yaxis.set_minor_formatter(FuncFormatter(lambda value, _: ""))
     elif figure.is_proportion:
         axes.set_ylim(-0.03, 1.03)

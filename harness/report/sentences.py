@@ -10,7 +10,7 @@ from harness.analysis.intervals import least_n_to_show
 from harness.analysis.means import Summary
 from harness.records import Condition, Learner, Requirement
 from harness.report.facts import StudyFacts
-from harness.report.tables import count_of, fixed, joined, plural, seconds_text, value_text
+from harness.report.tables import Column, count_of, fixed, joined, plural, seconds_text, value_text
 
 NO_SEARCH = (
     "These are readings at the plan's row counts, each interval for itself. What holds between two row "
@@ -53,62 +53,52 @@ def _together(requirement: Requirement) -> str:
 
 def grid_answer(answer: GridAnswer, requirement: Requirement) -> str:
     """Say which row counts of the plan reach the assurance for one learner."""
-    target = requirement.assurance
     if answer.largest is None:
         return (
             f"{answer.label}: no network is left to ask about; the truth leaves a bounded measure undefined."
         )
     if answer.best is None:
+        greatest = "The greatest share was" if answer.largest.n_met else "No run met the requirement: share"
         return (
-            f"{answer.label}: not reached on this grid up to {answer.checked_to:,} rows. The greatest share "
-            f"was {_share(answer.largest, requirement)} at {answer.largest.cell.rows:,} rows."
+            f"{answer.label}: not reached on this grid up to {answer.checked_to:,} rows. {greatest} "
+            f"{_share(answer.largest, requirement)} at {answer.largest.cell.rows:,} rows."
         )
-    best = answer.best.cell.rows
+    best = f"{answer.best.cell.rows:,} rows, share {_share(answer.best, requirement)}."
     if answer.sufficient is None:
         said = (
-            f"{answer.label}: no row count up to {answer.checked_to:,} is shown to suffice. Best estimate on "
-            f"the grid: {best:,} rows, share {_share(answer.best, requirement)}."
+            f"no row count up to {answer.checked_to:,} is shown to suffice. Best estimate on the grid: {best}"
         )
     else:
         said = (
-            f"{answer.label}: {answer.sufficient.cell.rows:,} rows are shown to suffice, "
+            f"{answer.sufficient.cell.rows:,} rows are shown to suffice, "
             f"share {_share(answer.sufficient, requirement)}. Best estimate on the grid: "
-        )
-        said += (
-            "the same."
-            if answer.sufficient is answer.best
-            else f"{best:,} rows, share {_share(answer.best, requirement, names=False)}."
+            f"{'the same.' if answer.sufficient is answer.best else best}"
         )
     if answer.is_at_smallest:
         said += " That is the smallest row count tried: fewer rows may do."
-    return said + _falls_below(answer.falls_below, target, requirement)
+    return f"{answer.label}: {said}{_falls_below(answer.falls_below, requirement)}"
 
 
-def _falls_below(shares: Sequence[MetShare], target: float, requirement: Requirement) -> str:
+def _falls_below(shares: Sequence[MetShare], requirement: Requirement) -> str:
     said = ""
-    for is_shown, where in ((True, "the whole interval lies below"), (False, "within the Monte Carlo error")):
-        own = [
-            share
+    for is_shown, how in ((True, "the whole interval lies below"), (False, "within the Monte Carlo error")):
+        places = joined(
+            f"{_share(share, requirement)} at {share.cell.rows:,} rows"
             for share in shares
-            if share.interval is not None and (share.interval.high < target) == is_shown
-        ]
-        if own:
-            places = joined(
-                f"{share.cell.rows:,} rows ({_share(share, requirement, names=False)})" for share in own
-            )
-            said += f" More rows fall below {target:g} again: {places}; {where}."
+            if share.interval is not None and (share.interval.high < requirement.assurance) == is_shown
+        )
+        if places:
+            said += f" More rows fall below {requirement.assurance:g} again: {places}; {how}."
     return said
 
 
-def _share(share: MetShare, requirement: Requirement, names: bool = True) -> str:
+def _share(share: MetShare, requirement: Requirement) -> str:
     interval = share.interval
-    if interval is None:
-        return "undefined"
+    assert interval is not None  # a grid answer names only row counts with a share
     value, low, high = (
         _near(each, requirement.assurance) for each in (interval.value, interval.low, interval.high)
     )
-    name = f"{percent(interval.confidence)} interval " if names else ""
-    return f"{value} ({name}{low} to {high})" if names else f"{value}, {low} to {high}"
+    return f"{value} of {share.n_runs:,} runs ({percent(interval.confidence)} interval {low} to {high})"
 
 
 def _near(value: float, target: float) -> str:
@@ -117,28 +107,29 @@ def _near(value: float, target: float) -> str:
     return fixed(value, 4 if hides else 2)
 
 
-def baselines(answers: Sequence[GridAnswer]) -> str:
+def baselines(answers: Sequence[GridAnswer], requirement: Requirement) -> str:
     """Say in one sentence that no baseline reaches the requirement."""
-    greatest = max(
-        answer.largest.interval.value
-        for answer in answers
-        if answer.largest is not None and answer.largest.interval is not None
-    )
-    labels = joined(answer.label for answer in answers)
-    noun = "Baseline" if len(answers) == 1 else "Baselines"
-    limit = max(answer.checked_to for answer in answers)
+    shares = [answer.largest for answer in answers if answer.largest is not None]
+    greatest = max(shares, key=lambda share: 0.0 if share.interval is None else share.interval.value)
     return (
-        f"{noun} {labels}: not reached on this grid up to {limit:,} rows. The greatest share was "
-        f"{fixed(greatest, 2)}."
+        f"{'Baseline' if len(answers) == 1 else 'Baselines'} {joined(answer.label for answer in answers)}: "
+        f"not reached on this grid up to {max(answer.checked_to for answer in answers):,} rows. The greatest "
+        f"share was {_share(greatest, requirement)}."
     )
 
 
-def performance(summary: Summary, measures: Sequence[str], decimals: Mapping[str, int]) -> str:
-    """Say what a learner reached at one row count, where a plan requires nothing."""
+def performance(summary: Summary, columns: Sequence[Column]) -> str:
+    """Say what a learner reached at one row count, where a plan requires nothing.
+
+    Parameters
+    ----------
+    summary : Summary
+    columns : sequence of Column
+        Of the measures to name.
+    """
     parts = [
-        f"{measure} {value_text(summary.measures[measure].mean, decimals[measure])}"
-        for measure in measures
-        if measure in summary.measures
+        f"{column.title} {value_text(summary.measures[column.key].mean, column.decimals)}"
+        for column in columns
     ]
     failed = count_of(summary.n_failed, summary.n_runs)
     return (
@@ -250,8 +241,8 @@ def left_out(shares: Iterable[MetShare], heading: str) -> str | None:
 def requirement_counts() -> str:
     """Say what counts as meeting the requirement."""
     return (
-        "A run meets the requirement if it ends done and meets all bounds at once. Failed runs, and answers "
-        "that leave a bounded measure undefined, do not meet it."
+        "A run meets the requirement if it ends done and meets all bounds at once. Failed runs do not meet "
+        "it, nor do runs without a value for a bounded measure, unless the truth itself leaves it undefined."
     )
 
 

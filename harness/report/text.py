@@ -15,7 +15,7 @@ from harness.report.answers import Answers
 from harness.report.tables import Column, Table, on_one_line, plural
 
 MAX_TABLES = 4  # more conditions than this are left to the report
-MAX_FAILURES = 8
+MAX_FAILURES = 6
 LEAST_LABEL = 12  # a narrower column of labels is not worth a table
 GAP = 2
 
@@ -51,8 +51,11 @@ def render_text(answers: Answers, width: int = 80, color: bool = False, report: 
         legacy_windows=False,
     )
     _first_lines(console, answers)
-    for condition in answers.conditions[:MAX_TABLES]:
-        _table(console, condition.learners, width)
+    shown = [condition.learners for condition in answers.conditions[:MAX_TABLES]]
+    for table in shown:
+        _table(console, table, width)
+    for note in dict.fromkeys(note for table in shown for note in table.notes):
+        console.print(_text(note))
     if len(answers.conditions) > MAX_TABLES:
         more = len(answers.conditions) - MAX_TABLES
         _paragraphs(console, [f"The tables of {plural(more, 'further condition')} are in the report."])
@@ -100,10 +103,12 @@ def _paragraphs(console: Console, lines: Iterable[str]) -> None:
 def _failures(console: Console, table: Table) -> None:
     if not table.rows:
         return
-    lines = [
-        f"{label} ({condition}): {runs} {status}, {cause or 'no cause given'}"
-        for condition, label, status, cause, runs, _ in table.texts()[:MAX_FAILURES]
-    ]
+    keys = [column.key for column in table.columns]
+    lines = []
+    for row in table.texts()[:MAX_FAILURES]:
+        cell = dict(zip(keys, row, strict=True))
+        place = f" ({cell['condition']})" if "condition" in cell else ""
+        lines.append(f"{cell['label']}{place}: {cell['runs']} {cell['status']}, {cell['cause']}")
     rest = len(table.rows) - MAX_FAILURES
     if rest > 0:
         lines.append(f"And {plural(rest, 'further line')} in the report.")
@@ -123,34 +128,37 @@ def _table(console: Console, table: Table, width: int) -> None:
     rows = [[on_one_line(row[place]) for place in kept] for row in table.texts()]
     console.print()
     console.print(_text(table.title, "bold"))
-    numbers = [
-        max(cell_len(text) for text in (*column.title.split(), *(row[place] for row in rows)))
+    taken = sum(
+        _number_width(column, [row[place] for row in rows]) + GAP
         for place, column in enumerate(columns)
         if column.is_number
-    ]
-    room = width - sum(numbers) - GAP * len(numbers)
-    if room >= LEAST_LABEL:
-        console.print(_grid(columns, rows, room))
+    )
+    if width - taken >= LEAST_LABEL:
+        console.print(_grid(columns, rows, width - taken))
     else:
         _list(console, columns, rows)
-    for note in table.notes:
-        console.print(_text(note))
 
 
 def _grid(columns: Sequence[Column], rows: Sequence[Sequence[str]], room: int) -> RichTable:
+    """Return the table with numbers as wide as need be, headings broken, and labels in what is left."""
     grid = RichTable(box=None, padding=(0, GAP, 0, 0), pad_edge=False, show_edge=False, header_style="")
-    for column in columns:
+    for place, column in enumerate(columns):
+        width = _number_width(column, [row[place] for row in rows]) if column.is_number else None
         grid.add_column(
             _text(column.title),
             justify="right" if column.is_number else "left",
-            no_wrap=column.is_number,
             overflow="fold",
             vertical="bottom",
-            max_width=None if column.is_number else room,
+            width=width,
+            max_width=room if width is None else None,
         )
     for row in rows:
         grid.add_row(*(_text(text) for text in row))
     return grid
+
+
+def _number_width(column: Column, texts: Sequence[str]) -> int:
+    return max(cell_len(text) for text in (*column.title.split(), *texts))
 
 
 def _list(console: Console, columns: Sequence[Column], rows: Sequence[Sequence[str]]) -> None:

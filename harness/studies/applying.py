@@ -106,8 +106,6 @@ def dataset_of(frame: pd.DataFrame) -> Dataset:
 
     A categorical column keeps its categories as states, in their order.
     """
-    import pandas as pd
-
     from generators.dataset import code_dtype
 
     columns, states = [], []
@@ -140,7 +138,8 @@ def rehearsed_learner(facts: StudyFacts, label: str | None) -> tuple[Learner, Sp
         label = own[0]
     if label not in learners:
         raise InputError(
-            f"--label: {label!r} is not in the study; it has {', '.join(map(repr, learners))}.{nearest(label, learners)}"
+            f"--label: {label!r} is not in the study; it has {', '.join(map(repr, learners))}."
+            f"{nearest(label, learners)}"
         )
     return learners[label], load(learners[label])
 

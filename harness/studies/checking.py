@@ -46,7 +46,8 @@ class Check:
         n_datasets = sum(condition.replicates * condition.datasets for condition in plan.conditions)
         lines = [
             f"{plan.path or 'The plan'} is valid.",
-            f"{self.n_runs:,} runs: {_n(len(plan.conditions), 'condition')}, {_n(n_datasets, 'dataset')} in all, "
+            f"{self.n_runs:,} runs: {_n(len(plan.conditions), 'condition')}, "
+            f"{_n(n_datasets, 'dataset')} in all, "
             f"{_n(len(plan.rows), 'row count')}, {_n(len(plan.learners), 'learner')}.",
         ]
         lines += [f"Note: {note}." for note in plan.notes]
@@ -56,8 +57,8 @@ class Check:
         time_line = f"About {time_span(self.seconds)} with {_n(self.n_workers, 'worker')} on this machine"
         if self.n_probed < self.n_cells:
             time_line += (
-                f"; {self.n_probed} of {self.n_cells} combinations of condition, rows and learner were tried, "
-                "the others are taken in proportion to their rows"
+                f"; {self.n_probed} of {self.n_cells} combinations of condition, rows and learner were "
+                "tried, the others are taken in proportion to their rows"
             )
         return [*lines, time_line + "."]
 

@@ -28,6 +28,8 @@ def write_demo_plan(folder: Path) -> Path:
     text = resources.files("harness.studies").joinpath(PLAN_NAME).read_text(encoding="utf-8")
     path = folder / PLAN_NAME
     if path.exists() and path.read_text(encoding="utf-8", errors="replace") != text:
-        raise InputError(f"{path}: is another plan than the demonstration's; it was left as it is. Use --folder")
+        raise InputError(
+            f"{path}: is another plan than the demonstration's; it was left as it is. Use --folder"
+        )
     atomic_write(path, text)
     return path

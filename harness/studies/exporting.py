@@ -37,7 +37,9 @@ def export_table(study: Study, table: str, path: Path) -> int:
         For another ending, or where Parquet needs a package that is not installed.
     """
     if path.suffix not in ENDINGS:
-        raise InputError(f"{path}: a table is written as {' or '.join(ENDINGS)}, got {path.suffix or 'no ending'!r}")
+        raise InputError(
+            f"{path}: a table is written as {' or '.join(ENDINGS)}, got {path.suffix or 'no ending'!r}"
+        )
     frame = table_frame(study, table)
     if path.suffix == ".csv":
         atomic_write(path, frame.to_csv(index=False, lineterminator="\n"))

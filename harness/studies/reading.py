@@ -49,7 +49,9 @@ def find_ledger(study: Path | str, ledger: Path | str | None = None) -> Path:
         If there is none.
     """
     path = Path(study)
-    found = Path(ledger) if ledger is not None else path if path.suffix == LEDGER_ENDING else ledger_path(path)
+    found = (
+        Path(ledger) if ledger is not None else path if path.suffix == LEDGER_ENDING else ledger_path(path)
+    )
     if not found.exists():
         raise InputError(f"{found}: there is no such ledger; 'arcassay run {path}' makes it")
     return found
@@ -135,12 +137,16 @@ def _own_runs(
     return [{**row, "learner": learners[row["label_place"]]} for row in own]
 
 
-def _frame(rows: list[dict[str, Any]], conditions: tuple[Condition, ...], factors: tuple[str, ...]) -> pd.DataFrame:
+def _frame(
+    rows: list[dict[str, Any]], conditions: tuple[Condition, ...], factors: tuple[str, ...]
+) -> pd.DataFrame:
     import pandas as pd
 
     names = {row["network"]: json.loads(row["network_graph"])["names"] for row in rows}
     columns: dict[str, Any] = {
-        "run": [run_name(row["dataset"], row["distortions"], row["rows"], row["learner"].key) for row in rows],
+        "run": [
+            run_name(row["dataset"], row["distortions"], row["rows"], row["learner"].key) for row in rows
+        ],
         "condition": [row["condition"] for row in rows],
         **{name: [conditions[row["condition"]].factors.get(name) for row in rows] for name in factors},
         "rows": [row["rows"] for row in rows],

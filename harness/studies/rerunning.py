@@ -89,7 +89,11 @@ def do_again(study: Study, name: str) -> Again:
     frame = study.runs.frame
     found = frame[frame["run"].str.startswith(name)]
     if len(found) != 1 or not name:
-        many = f"{len(found)} runs begin so" if len(found) else f"there is no such run.{nearest(name, frame['run'])}"
+        many = (
+            f"{len(found)} runs begin so"
+            if len(found)
+            else f"there is no such run.{nearest(name, frame['run'])}"
+        )
         raise InputError(f"{study.ledger}: run {name!r}: {many}")
     stored = found.iloc[0]
     condition = study.facts.conditions[int(stored["condition"])]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import platform
 import socket
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
 from importlib import metadata
 from pathlib import Path
@@ -57,16 +57,16 @@ class Watcher:
     """What `run_plan` tells whoever watches; every method may be overridden."""
 
     def compiling(self) -> None:
-        """Kernels are about to be compiled, once for this version and machine."""
+        """Hear that kernels are about to be compiled, once for this version and machine."""
 
     def started(self, progress: Progress, n_kept: int) -> None:
-        """The work has begun; `n_kept` runs of the plan are in the ledger already."""
+        """Hear that the work has begun; `n_kept` runs of the plan are in the ledger already."""
 
     def advanced(self, progress: Progress) -> None:
-        """Some runs may have ended."""
+        """Hear that some runs may have ended."""
 
     def stopping(self) -> None:
-        """A first wish to stop was noted: what runs now is finished."""
+        """Hear that a first wish to stop was noted: what runs now is finished."""
 
 
 def ledger_path(plan: Path) -> Path:
@@ -104,8 +104,8 @@ def run_plan(
     Raises
     ------
     InputError
-        If the plan is wrong, the ledger is not one that this version reads, or a network is drawn differently today than
-        when the ledger was begun.
+        If the plan is wrong, the ledger is not one that this version reads, or a network is drawn
+        differently today than when the ledger was begun.
     MachineStop
         If the disk is full, the ledger is in use, or workers cannot be kept alive.
     """
@@ -177,9 +177,7 @@ def _store(event: Event, plan: Plan, store: Ledger, session: int) -> None:
         return
     dataset = store.dataset_id(event.work.dataset_key, canonical_json(event.work.data))
     learner = plan.learners[event.request.learner]
-    store.store_run(
-        dataset, event.request.rows, learner, event.outcome, session=session, asked_by="run"
-    )
+    store.store_run(dataset, event.request.rows, learner, event.outcome, session=session, asked_by="run")
 
 
 def _by_threads(plan: Plan, works: Sequence[Work]) -> dict[int, list[Work]]:

@@ -60,7 +60,9 @@ class Standing:
             lines.append(f"  {label:{wide}}  " + ", ".join(f"{n:,} {status}" for status, n in counts.items()))
         unended = [session for session in self.sessions if session["ended"] is None]
         if unended:
-            lines.append(f"{len(unended)} of {len(self.sessions)} sessions did not end by themselves, or go on now.")
+            lines.append(
+                f"{len(unended)} of {len(self.sessions)} sessions did not end by themselves, or go on now."
+            )
         return lines
 
 

@@ -329,7 +329,8 @@ FAULTS = {
     ),
     "control character": ("variable z\x01 { }", "8:11: found '\\x01', which stands for nothing here."),
     "cycle of two": (
-        "variable z { type discrete [ 1 ] { x }; }\nprobability ( z | rain ) { default 1; }\nprobability ( rain | z ) { default 1, 0; }",
+        "variable z { type discrete [ 1 ] { x }; }\nprobability ( z | rain ) { default 1; }\n"
+        "probability ( rain | z ) { default 1, 0; }",
         "10:15: the parents of 'rain' close a directed cycle: 'rain' -> 'z' -> 'rain'.",
     ),
 }
@@ -376,6 +377,20 @@ def test_cycle_over_several_blocks() -> None:
     assert str(caught.value) == (
         "n.bif:7:15: the parents of 'c' close a directed cycle: 'c' -> 'a' -> 'b' -> 'c'."
     )
+
+
+def test_tables_too_large() -> None:
+    """Tables that would take too much memory are refused before any is taken."""
+    names = [f"v{i}" for i in range(27)]
+    text = "network n { }\n" + "".join(
+        f"variable {name} {{ type discrete [ 2 ] {{ a, b }}; }}\n" for name in names
+    )
+    text += "".join(f"probability ( {name} ) {{ default 0.5, 0.5; }}\n" for name in names[1:])
+    text += f"probability ( v0 | {', '.join(names[1:])} ) {{ default 0.5, 0.5; }}\n"
+
+    # 26 tables of 2 cells and one of 2^27
+    with pytest.raises(InputError, match="'v0' would have 134217780 cells; at most 67108864 are accepted"):
+        parse_bif(text, "n.bif")
 
 
 def test_more_parents_than_an_array_has_axes() -> None:

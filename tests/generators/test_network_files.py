@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import numpy as np
@@ -15,7 +16,11 @@ from generators.graph import Graph
 from generators.network import Cpt, Network
 
 FORMATS = sorted({".bif", ".json"})
-ODD_NAMES = ["<5", "5-12", "12+", ">=7.5", "Asy/Patch", "a//b", "/*", "table", "property", "network", "a b", ",", "{", "é", "1e5", "|"]  # fmt: skip
+ODD_NAMES = [
+    *("<5", "5-12", "12+", ">=7.5", "Asy/Patch", "a//b", "/*", "table", "property", "network"),
+    *("a b", ",", "{", "|", "é", "1e5", " ", "\u00a0", "\u2028"),
+]
+JUNK = [*'"{}[],;a9\\', "-1", "1e999", "/*", "nan"]
 # Every format of today holds these characters; what only one of them refuses is tested beside it.
 NAMES = st.one_of(
     st.sampled_from(ODD_NAMES),
@@ -62,7 +67,7 @@ class TestEveryFormat:
         assert notes == ()
 
     def test_truncated_anywhere(self, ending: str, small: Network) -> None:
-        """A file cut off at any position is refused with one line that names it, unless only white space is lost."""
+        """A file cut off anywhere before its last white space is refused in one line."""
         parse, text = NETWORK_FORMATS[ending]
         whole = text(small)
 
@@ -74,7 +79,7 @@ class TestEveryFormat:
 
     @given(data=st.data())
     def test_damaged(self, ending: str, data: st.DataObject) -> None:
-        """A file with pieces cut out, doubled or replaced is read or refused in one line, never anything else."""
+        """A file with pieces cut out, doubled or replaced is read or refused in one line."""
         parse, text = NETWORK_FORMATS[ending]
         cpts = {
             "a": Cpt("a", (), np.array([0.5, 0.5])),
@@ -84,16 +89,17 @@ class TestEveryFormat:
         for _ in range(data.draw(st.integers(1, 3))):
             start = data.draw(st.integers(0, len(damaged)))
             end = min(len(damaged), start + data.draw(st.integers(0, 12)))
-            junk = st.sampled_from([damaged[start:end] * 2, '"', "{", "}", "[", "]", ",", ";", "a", "9", "-1", "1e999", "/*", "\\", "nan"])  # fmt: skip
-            damaged = damaged[:start] + data.draw(st.one_of(junk, st.text(max_size=3))) + damaged[end:]
+            junk = st.sampled_from([damaged[start:end] * 2, *JUNK]) | st.text(max_size=3)
+            damaged = damaged[:start] + data.draw(junk) + damaged[end:]
 
         try:
             network, _ = parse(damaged, "file")
         except InputError as error:
-            assert str(error).startswith("file:")
-            assert "\n" not in str(error)
+            said = str(error)
         else:
-            assert network.names
+            said = f"file: {len(network.names)} variables"
+
+        assert re.fullmatch(r"file:[^\n]+", said)
 
     @given(content=st.text(max_size=60))
     def test_any_text(self, ending: str, content: str) -> None:
@@ -122,31 +128,6 @@ class TestEveryFormat:
         path.write_bytes(b"\xef\xbb\xbf" + text.encode())
 
         assert read_network(path).key() == small.key()
-
-    def test_too_large(self, ending: str) -> None:
-        """Tables that would take too much memory are refused before any is taken."""
-        parse, _ = NETWORK_FORMATS[ending]
-        n = 27
-        names = [f"v{i}" for i in range(n)]
-        child = ", ".join(names[1:])
-        if ending == ".bif":
-            text = "network n { }\n" + "".join(
-                f"variable {name} {{ type discrete [ 2 ] {{ a, b }}; }}\nprobability ( {name} ) {{ table 0.5, 0.5; }}\n"
-                for name in names[1:]
-            )
-            text += "variable v0 { type discrete [ 2 ] { a, b }; }\n"
-            text += f"probability ( v0 | {child} ) {{ default 0.5, 0.5; }}\n"
-        else:
-            one = '{"name": "%s", "states": ["a", "b"], "parents": [%s], "rows": [[0.5, 0.5]]}'
-            quoted = ", ".join(f'"{name}"' for name in names[1:])
-            variables = [one % (name, "") for name in names[1:]] + [one % ("v0", quoted)]
-            text = f'{{"format": "arcassay network", "version": 1, "variables": [{", ".join(variables)}]}}'
-
-        # 26 tables of 2 cells and one of 2^27
-        with pytest.raises(
-            InputError, match=r"'v0' would have 134217780 cells; at most 67108864 are accepted"
-        ):
-            parse(text, "file")
 
 
 def test_unknown_ending(small: Network, tmp_path: Path) -> None:

@@ -37,8 +37,8 @@ rows = [250, 500, 1000, 2000, 4000, 8000, 16000]
 datasets = 1
 [[learner]]
 method = "pc"
-label = "PC, 1 %"
-alpha = 0.01
+label = "PC, 2 %"
+alpha = 0.02
 [[learner]]
 method = "hill-climbing"
 score = "bic"
@@ -75,9 +75,13 @@ def needy(data, *, depth: int):
     "Return nothing."
 """
 
-BROKEN_BIF = (
-    "network two { }\nvariable a { type discrete [ 2 ] { no, yes }; }\nprobability ( a ) { table 0.5; }\n"
-)
+BROKEN_BIF = """\
+network two { }
+variable a { type discrete [ 2 ] { no, yes }; }
+probability ( a ) { table 0.5; }
+"""
+NO_ARCS = '[[learner]]\nmethod = "no-arcs"\n'
+MINE = '[[learner]]\nsource = "my_learner.py:learn"\n'
 
 
 @pytest.fixture
@@ -88,14 +92,14 @@ def folder(tmp_path: Path) -> Path:
 
 
 def plan_of(
-    *,
-    top: str = "",
-    networks: str = "variables = 6",
-    data: str = "",
-    learners: str = '[[learner]]\nmethod = "no-arcs"',
+    *, top: str = "", networks: str = "variables = 6", data: str = "", learners: str = NO_ARCS, rest: str = ""
 ) -> str:
     """Give the text of a plan that is sound but for what is put in."""
-    return f"{top}\n[networks]\n{networks}\n[data]\n{data}\n{learners}\n"
+    return f"{top}\n[networks]\n{networks}\n[data]\n{data}\n{learners}\n{rest}\n"
+
+
+def factors(plan: Plan) -> list[dict[str, Any]]:
+    return [dict(condition.factors) for condition in plan.conditions]
 
 
 def parsed(folder: Path, **parts: str) -> Plan:
@@ -122,7 +126,7 @@ def test_a_whole_plan_is_read(folder: Path) -> None:
 
     assert (plan.title, plan.seed, plan.text) == ("Apiary winter-loss survey", 20261201, WHOLE)
     assert plan.path == folder / "survey.toml"
-    assert [dict(condition.factors) for condition in plan.conditions] == [
+    assert factors(plan) == [
         {"variables": 12},
         {"variables": 24},
     ]
@@ -136,8 +140,8 @@ def test_a_whole_plan_is_read(folder: Path) -> None:
         "concentration": 1.0,
     }
     assert plan.rows == (250, 500, 1000, 2000, 4000, 8000, 16000)
-    assert [learner.label for learner in plan.learners] == ["PC, 1 %", "hill-climbing", "my_learner.py:learn"]
-    assert [dict(learner.settings) for learner in plan.learners] == [{"alpha": 0.01}, {}, {}]
+    assert [learner.label for learner in plan.learners] == ["PC, 2 %", "hill-climbing", "my_learner.py:learn"]
+    assert [dict(learner.settings) for learner in plan.learners] == [{"alpha": 0.02}, {}, {}]
     assert plan.limits == Limits(60.0, 1024, 1)
     assert [learner.limits.seconds for learner in plan.learners] == [60.0, 60.0, 5.0]
     assert plan.requirement == Requirement(
@@ -197,7 +201,7 @@ def test_lists_are_crossed_and_the_varied_keys_are_the_factors() -> None:
     plan = parse_plan(plan_of(networks='variables = [5, 6]\nstates = [2, "2-4"]\nmean_parents = [1.0]'))
 
     expected = [{"variables": variables, "states": states} for variables in (5, 6) for states in (2, "2-4")]
-    assert [dict(condition.factors) for condition in plan.conditions] == expected
+    assert factors(plan) == expected
 
 
 def test_a_key_that_a_level_does_not_use_is_absent_there_and_equal_conditions_are_merged() -> None:
@@ -206,7 +210,7 @@ def test_a_key_that_a_level_does_not_use_is_absent_there_and_equal_conditions_ar
 
     plan = parse_plan(plan_of(networks=networks))
 
-    assert [dict(condition.factors) for condition in plan.conditions] == [
+    assert factors(plan) == [
         {"topology": "random-order", "mean_parents": 0.5},
         {"topology": "random-order", "mean_parents": 1.0},
         {"topology": "uniform"},
@@ -215,7 +219,7 @@ def test_a_key_that_a_level_does_not_use_is_absent_there_and_equal_conditions_ar
 
 
 def test_levels_that_say_the_same_are_one() -> None:
-    """A whole number, its text and a range of one number are the same states; 1 is the same density as 1.0."""
+    """A number, its text and a range of one number are the same states; 1 is the same density as 1.0."""
     plan = parse_plan(
         plan_of(networks='variables = [6, 6]\nstates = [2, "2", "2-2"]\nmean_parents = [1, 1.0]')
     )
@@ -292,7 +296,7 @@ def test_given_networks_come_from_files_beside_the_plan(folder: Path) -> None:
         {"file": str(folder / "one.bif")},
         {"file": str(folder / "two.json")},
     ]
-    assert [dict(condition.factors) for condition in plan.conditions] == [{"file": "one"}, {"file": "two"}]
+    assert factors(plan) == [{"file": "one"}, {"file": "two"}]
     assert [(condition.replicates, condition.datasets) for condition in plan.conditions] == [
         (1, 100),
         (1, 100),
@@ -322,7 +326,7 @@ def test_published_networks_are_named(folder: Path) -> None:
     """A network of the catalogue needs no file; how many datasets it gets is the plan's to say."""
     plan = parsed(folder, networks='published = ["chest-clinic", "sprinkler"]', data="datasets = 7")
 
-    assert [dict(condition.factors) for condition in plan.conditions] == [
+    assert factors(plan) == [
         {"published": "chest-clinic"},
         {"published": "sprinkler"},
     ]
@@ -343,7 +347,8 @@ def test_what_a_cap_takes_away_is_noted() -> None:
 
     assert round(expected, 1) == 17.5
     assert plan.notes == (
-        "random-order networks of 12 variables: 17.5 arcs expected after the cap of 4 parents, 18.0 asked for",
+        "random-order networks of 12 variables: 17.5 arcs expected after the cap of 4 parents, "
+        "18.0 asked for",
     )
 
 
@@ -478,7 +483,6 @@ def test_a_file_that_cannot_be_read_is_named(tmp_path: Path) -> None:
 
 
 NEEDED = "networks.variables: is required: a whole number between 2 and 5000, or a list of such numbers."
-MINE = '[[learner]]\nsource = "my_learner.py:learn"\n'
 WRONG_TOP = {
     "": [NEEDED, "learner: at least one [[learner]] is needed."],
     plan_of(top="titel = 'x'"): ["titel: unknown key. Did you mean 'title'?"],
@@ -486,13 +490,20 @@ WRONG_TOP = {
     plan_of(top="zzz = 3"): [
         "zzz: unknown key; accepted: title, seed, networks, data, learner, limits, requirement, gate."
     ],
-    plan_of(top="seed = -1"): ["seed: must be a whole number between 0 and 9.22337e+18, got -1."],
-    plan_of(top="seed = true"): ["seed: must be a whole number between 0 and 9.22337e+18, got True."],
+    plan_of(top="seed = -1"): ["seed: must be a whole number at least 0, got -1."],
+    plan_of(top="seed = true"): ["seed: must be a whole number at least 0, got True."],
+    plan_of(top=f"seed = 0x{'f' * 5000}\ntitle = [1, {2**63}]"): [
+        "seed: must be a number of at most 64 bits.",
+        "title[2]: must be a number of at most 64 bits.",
+    ],
     "networks = 3\n" + MINE: ["networks: must be a table, got 3.", NEEDED],
-    plan_of(top='"a b\\n" = 1')[:12] + plan_of()[0:]: [
+    plan_of(top='"a b\\n" = 1'): [
         '"a b\\n": unknown key; accepted: title, seed, networks, data, learner, limits, requirement, gate.'
     ],
 }
+WRONG_TOP[plan_of(top="learner = 3", learners="")] = [
+    "learner: must be written as [[learner]], one such table per learner."
+]
 WRONG_NETWORKS = {
     "variables = 12\nreplicats = 3": ["networks.replicats: unknown key. Did you mean 'replicates'?"],
     "variables = [12, 1]": ["networks.variables[2]: must be a whole number between 2 and 5000, got 1."],
@@ -522,24 +533,25 @@ WRONG_NETWORKS = {
     "variables = 6\nconcentration = [1, 0]": ["networks.concentration[2]: must be a number above 0, got 0."],
     "variables = 6\nconcentration = inf": ["networks.concentration: must be a number above 0, got inf."],
     "variables = 6\ntopology = 'uniform'\nmean_parents = 1": [
-        "networks.mean_parents: is a setting of 'random-order', which no condition uses ('uniform', 'dirichlet')."
+        "networks.mean_parents: is a setting of 'random-order', which no condition uses "
+        "('uniform', 'dirichlet')."
     ],
     "variables = [3, 4]\nmean_parents = 1.5": [
         "networks.mean_parents: a DAG on 3 variables has at most 1 parents on average, got 1.5."
     ],
     "variables = 101\ntopology = 'uniform'": [
-        "networks: topology 'uniform': draws at most 100 variables, got 101: the exact counts of DAGs that it needs "
-        "grow too large beyond."
+        "networks.variables: topology 'uniform' draws at most 100, got 101; the exact counts of DAGs that it "
+        "needs grow too large beyond."
     ],
     f"variables = {list(range(2, 102))}\nmean_parents = {[k / 64 for k in range(21)]}": [
         "networks: the lists cross to 2100 conditions; at most 2000 are accepted."
     ],
     "variables = 6\nmissing = 0.1": [
-        "networks.missing: unknown key; accepted: variables, topology, states, cpts, replicates, file, published, "
-        "mean_parents, max_parents, concentration."
+        "networks.missing: unknown key; accepted: variables, topology, states, cpts, replicates, file, "
+        "published, mean_parents, max_parents, concentration."
     ],
     "file = 'none.bif'": ["networks.file: no such file: 'none.bif'."],
-    "file = ['none.bif', 3, '\\u0000']": [
+    "file = ['none.bif', 3, \"\\u0000\"]": [
         "networks.file[1]: no such file: 'none.bif'.",
         "networks.file[2]: must be text, got 3.",
         "networks.file[3]: no such file: '\\x00'.",
@@ -547,7 +559,9 @@ WRONG_NETWORKS = {
     "file = 'my_learner.py'": [
         "networks.file: my_learner.py: a network file must end in one of .bif, .json."
     ],
-    "file = 'broken.bif'": ["networks.file: broken.bif:3:21: expected 2 probabilities, found 1."],
+    "file = 'broken.bif'": [
+        "networks.file: broken.bif:3:27: expected 2 probabilities for the table of 'a', found 1."
+    ],
     "published = 'chest-clinik'": [
         "networks.published: unknown network 'chest-clinik'. Did you mean 'chest-clinic'?"
     ],
@@ -579,7 +593,6 @@ WRONG_DATA = {
 }
 METHODS = "chance, chow-liu, hill-climbing, no-arcs, pairwise, pc"
 WRONG_LEARNERS = {
-    "learner = 3": ["learner: must be written as [[learner]], one such table per learner."],
     "[learner]\nmethod = 'pc'": ["learner: must be written as [[learner]], one such table per learner."],
     "[[learner]]": ["learner[1]: needs a method or a source."],
     f"{MINE}method = 'pc'": ["learner[1]: gives both a method and a source; one is accepted."],
@@ -589,7 +602,7 @@ WRONG_LEARNERS = {
     "[[learner]]\nmethod = 'zzz'": [f"learner[1].method: unknown method 'zzz'; accepted: {METHODS}."],
     "[[learner]]\nmethod = 3": ["learner[1].method: must be text, got 3."],
     "[[learner]]\nmethod = 'no-arcs'\n[[learner]]\nmethod = 'pc'\nalpha = -3": [
-        "learner[2].alpha: must be a number between 0 and 1, got -3."
+        "learner[2].alpha: must be a number strictly between 0 and 1, got -3."
     ],
     f"{MINE}alpha = -3": ["learner[1].alpha: must be a number between 0 and 1, got -3."],
     f"{MINE}alpha = [0.1, 0.2]": ["learner[1].alpha: must be a number between 0 and 1, got [0.1, 0.2]."],
@@ -597,8 +610,8 @@ WRONG_LEARNERS = {
     f"{MINE}fast = 1": ["learner[1].fast: must be true or false, got 1."],
     f"{MINE}alpa = 0.1": ["learner[1].alpa: unknown key. Did you mean 'alpha'?"],
     f"{MINE}command = ['x']": [
-        "learner[1].command: unknown key; accepted: method, source, label, vary, seconds, memory_mb, threads, alpha, "
-        "depth, fast, test."
+        "learner[1].command: unknown key; accepted: method, source, label, vary, seconds, memory_mb, threads, "
+        "alpha, depth, fast, test."
     ],
     f"{MINE}label = ''": ["learner[1].label: must be 1 to 80 printable characters, got ''."],
     f'{MINE}label = "a\\nb"': ["learner[1].label: must be 1 to 80 printable characters, got 'a\\nb'."],
@@ -636,7 +649,8 @@ WRONG_LEARNERS = {
         "learner[2].label: 'A' is the label of learner[1] already; labels must differ."
     ],
     f"{MINE}label = 'A'\n{MINE}label = 'B'\nseconds = 3": [
-        "learner[2]: is the method of learner[1] with the same settings; labels and limits make no other learner."
+        "learner[2]: is the method of learner[1] with the same settings; "
+        "labels and limits make no other learner."
     ],
 }
 WRONG_LIMITS = {
@@ -645,17 +659,15 @@ WRONG_LIMITS = {
     "second = 3": ["limits.second: unknown key. Did you mean 'seconds'?"],
 }
 AS_IN = "must be MEASURE, one of >= <= > <, and a number, as in 'skeleton_recall >= 0.7'"
+BOUNDS = "['skeleton_recall >= 0.7', 'skeleton_precision >= 0.8']"
 WRONG_REQUIREMENT = {
     "bounds = 'skeleton_recall >= 0.7'": [
-        "requirement.bounds: must be a list such as ['skeleton_recall >= 0.7', 'skeleton_precision >= 0.8'], got "
-        "'skeleton_recall >= 0.7'."
+        f"requirement.bounds: must be a list such as {BOUNDS}, got 'skeleton_recall >= 0.7'."
     ],
-    "bounds = []": [
-        "requirement.bounds: must be a list such as ['skeleton_recall >= 0.7', 'skeleton_precision >= 0.8'], got []."
-    ],
-    "bounds = ['skeleton_recall', 'skeleton_recall == 1', 'class_shd < inf', 3, 'skeleton_recall[strength >= 1] >= 1']": [
-        f"requirement.bounds[1]: {AS_IN}, got 'skeleton_recall'.",
-        f"requirement.bounds[2]: {AS_IN}, got 'skeleton_recall == 1'.",
+    "bounds = []": [f"requirement.bounds: must be a list such as {BOUNDS}, got []."],
+    "bounds = ['imap', 'imap == 1', 'class_shd < inf', 3, 'skeleton_recall[strength >= 1] >= 1']": [
+        f"requirement.bounds[1]: {AS_IN}, got 'imap'.",
+        f"requirement.bounds[2]: {AS_IN}, got 'imap == 1'.",
         f"requirement.bounds[3]: {AS_IN}, got 'class_shd < inf'.",
         f"requirement.bounds[4]: {AS_IN}, got 3.",
         f"requirement.bounds[5]: {AS_IN}, got 'skeleton_recall[strength >= 1] >= 1'.",
@@ -666,7 +678,8 @@ WRONG_REQUIREMENT = {
     "bounds = ['skeleton_recall >= 70', 'class_shd <= -1']": [
         "requirement.bounds[1]: must name a value that skeleton_recall can have, between 0 and 1, got "
         "'skeleton_recall >= 70'.",
-        "requirement.bounds[2]: must name a value that class_shd can have, at least 0, got 'class_shd <= -1'.",
+        "requirement.bounds[2]: must name a value that class_shd can have, at least 0, got "
+        "'class_shd <= -1'.",
     ],
     "assurance = 1\nconfidence = 0\nprecision = 2\nmax_rows = 0\nmax_runs = 100\nmax_failed = -0.1": [
         "requirement.assurance: must be a number strictly between 0 and 1, got 1.",
@@ -677,7 +690,8 @@ WRONG_REQUIREMENT = {
         "requirement.max_failed: must be a number between 0 and 1, got -0.1.",
     ],
     "max_rows = 1431655766": [
-        "requirement.max_rows: 1431655766 rows of 6 variables are 8589934596 cells; at most 8589934592 are accepted."
+        "requirement.max_rows: 1431655766 rows of 6 variables are 8589934596 cells; at most 8589934592 are "
+        "accepted."
     ],
     "asurance = 0.8": ["requirement.asurance: unknown key. Did you mean 'assurance'?"],
 }
@@ -696,16 +710,10 @@ WRONG = [
     *WRONG_TOP.items(),
     *((plan_of(networks=part), lines) for part, lines in WRONG_NETWORKS.items()),
     *((plan_of(data=part), lines) for part, lines in WRONG_DATA.items()),
-    *(
-        (plan_of(learners=f"[limits]\n{part}", top="") + '[[learner]]\nmethod = "no-arcs"', lines)
-        for part, lines in WRONG_LIMITS.items()
-    ),
-    *(
-        (f"learner = 3\n{plan_of(learners='')}" if part == "learner = 3" else plan_of(learners=part), lines)
-        for part, lines in WRONG_LEARNERS.items()
-    ),
-    *((f"{plan_of()}[requirement]\n{part}", lines) for part, lines in WRONG_REQUIREMENT.items()),
-    *((f"{plan_of()}[gate]\n{part}", lines) for part, lines in WRONG_GATE.items()),
+    *((plan_of(learners=part), lines) for part, lines in WRONG_LEARNERS.items()),
+    *((plan_of(rest=f"[limits]\n{part}"), lines) for part, lines in WRONG_LIMITS.items()),
+    *((plan_of(rest=f"[requirement]\n{part}"), lines) for part, lines in WRONG_REQUIREMENT.items()),
+    *((plan_of(rest=f"[gate]\n{part}"), lines) for part, lines in WRONG_GATE.items()),
 ]
 
 
@@ -783,43 +791,20 @@ def test_all_faults_are_said_at_once(folder: Path) -> None:
 # Whatever is written
 
 
-SNIPPETS = st.sampled_from(
-    [
-        "[networks]",
-        "[[learner]]",
-        "[data]",
-        "[limits]",
-        "[gate]",
-        "[requirement]",
-        "variables",
-        "rows",
-        "method",
-        "file",
-    ]
-    + [
-        "source",
-        "vary",
-        "bounds",
-        "margin",
-        "states",
-        "=",
-        ".",
-        "'pc'",
-        "3",
-        "-1",
-        "1e400",
-        "0x" + "f" * 20,
-        "nan",
-    ]
-    + ["{", "}", "[", "]", ",", "\n", '"', "'", "true", "1979-05-27", "#", "\\u0000", "9" * 5000, "\x00", "é"]
-)
+SNIPPETS = """\
+[networks] | [[learner]] | [data] | [limits] | [gate] | [requirement] | variables | rows | method | file
+| source | vary | bounds | margin | states | = | . | 'pc' | 3 | -1 | 1e400 | 0xffffffffffffffffffff | nan | {
+| } | [ | ] | , | \n | " | ' | true | 1979-05-27 | # | \\u0000 | \x00 | \u00e9"""
+LEAVES = """\
+1 | -1 | 0.5 | '' | 'pc' | '2-3' | true | nan | inf | 1979-05-27 | '\\x' | 'a.py:b' | 'a.b:c'
+| 'class_shd <= 3' | '\U0001f41d' | "a\\nb" | "\\u0000" | "\\u0000.py:b" """
+KEYS = """\
+title seed networks data learner limits requirement gate variables topology cpts states mean_parents
+replicates file published rows datasets method source label vary alpha seconds memory_mb threads bounds assurance margin
+reference "\\n" """
+TABLES = st.sampled_from(["", "[networks]", "[data]", "[[learner]]", "[limits]", "[requirement]", "[gate]"])
 VALUES = st.recursive(
-    st.sampled_from(
-        ["1", "-1", "0.5", "''", "'pc'", "'2-3'", "true", "nan", "inf", "1979-05-27", "9" * 30, "'\\\\x'"]
-    )
-    | st.sampled_from(
-        ["'a.py:b'", "'a.b:c'", "'class_shd <= 3'", "0x" + "f" * 5000, "'\U0001f41d'", '"a\\nb"']
-    ),
+    st.sampled_from([*LEAVES.split("| "), "9" * 30, "0x" + "f" * 5000]),
     lambda inner: (
         st.lists(inner, max_size=3).map(lambda items: f"[{', '.join(items)}]")
         | st.dictionaries(st.sampled_from(["alpha", "class_shd", '""', "'a b'"]), inner, max_size=2).map(
@@ -828,64 +813,31 @@ VALUES = st.recursive(
     ),
     max_leaves=4,
 )
-KEYS = st.sampled_from(
-    [
-        "title",
-        "seed",
-        "networks",
-        "data",
-        "learner",
-        "limits",
-        "requirement",
-        "gate",
-        "variables",
-        "topology",
-        "cpts",
-    ]
-    + [
-        "states",
-        "mean_parents",
-        "replicates",
-        "file",
-        "published",
-        "rows",
-        "datasets",
-        "method",
-        "source",
-        "label",
-    ]
-    + [
-        "vary",
-        "alpha",
-        "seconds",
-        "memory_mb",
-        "threads",
-        "bounds",
-        "assurance",
-        "margin",
-        "reference",
-        '"\\n"',
-    ]
-)
-TABLES = st.sampled_from(["", "[networks]", "[data]", "[[learner]]", "[limits]", "[requirement]", "[gate]"])
+JUNK = st.sampled_from([*SNIPPETS.split("| "), "9" * 5000]) | st.text(max_size=3)
 
 
 def read_or_refuse(text: str) -> None:
     """Read a plan; only an input error, of lines, may come of it."""
+    found: tuple[str, ...] = ("read",)
     try:
         parse_plan(text)
     except InputError as error:
-        assert error.faults
-        assert not any("\n" in fault for fault in error.faults)
+        found = error.faults
+    assert found
+    assert not any("\n" in fault for fault in found)
 
 
-@given(st.lists(SNIPPETS | st.text(max_size=3), max_size=25).map(" ".join))
+@given(st.lists(JUNK, max_size=25).map(" ".join))
 def test_any_text_is_read_or_refused(text: str) -> None:
     """No text raises anything but an input error."""
     read_or_refuse(text)
 
 
-@given(st.lists(st.tuples(TABLES, st.dictionaries(KEYS, VALUES, max_size=4)), max_size=5))
+@given(
+    st.lists(
+        st.tuples(TABLES, st.dictionaries(st.sampled_from(KEYS.split()), VALUES, max_size=4)), max_size=5
+    )
+)
 def test_any_tables_are_read_or_refused(tables: list[tuple[str, dict[str, str]]]) -> None:
     """No value of any type under any key raises anything but an input error."""
     lines = [
@@ -910,5 +862,5 @@ def test_a_sound_plan_with_a_slip_is_read_or_refused(data: st.DataObject) -> Non
 
 def test_deep_nesting_is_refused() -> None:
     """A text that would exhaust the stack is an input error."""
-    with pytest.raises(InputError, match="plan: is nested too deeply."):
+    with pytest.raises(InputError, match=r"^plan: is nested too deeply\.$"):
         parse_plan(f"title = {'[' * 100_000}")
