@@ -133,17 +133,25 @@ def _set_cells(arrow: Arrow) -> NDArray[np.int64]:
             n_occupied += block[k] != 0
         for word in occupied[:n_occupied]:
             if n + 8 > cells.size:
-                cells = np.concatenate((cells, np.empty_like(cells)))
+                cells = _doubled(cells)
             eight = flat[8 * word : 8 * word + 8]
             for k in range(8):
                 cells[n] = 8 * word + k
                 n += eight[k]
     if n + 8 > cells.size:
-        cells = np.concatenate((cells, np.empty_like(cells)))
+        cells = _doubled(cells)
     for k in range(8 * n_words, flat.size):
         cells[n] = k
         n += flat[k]
     return cells[:n]
+
+
+@inlined
+def _doubled(cells: NDArray[np.int64]) -> NDArray[np.int64]:
+    larger = np.empty(2 * cells.size, np.int64)
+    for k in range(cells.size):
+        larger[k] = cells[k]
+    return larger
 
 
 @warm_up

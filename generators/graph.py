@@ -173,7 +173,8 @@ class Graph:
     def parents(self, name: str) -> tuple[str, ...]:
         """Return the variables with a directed edge into `name`, in the graph's order."""
         j = self.names.index(name)
-        return tuple(self.names[i] for i in np.flatnonzero(self.arrow[:, j] & ~self.arrow[j]))
+        is_parent = self.arrow[:, j] & ~self.arrow[j]
+        return tuple(self.names[i] for i in is_parent.nonzero()[0].tolist())
 
     def order(self) -> tuple[int, ...]:
         """Return a topological order of the variables' positions, the smallest position first among equals.

@@ -55,10 +55,10 @@ class Cpt:
             )
         if len(set(self.parents)) != len(self.parents) or self.variable in self.parents:
             raise InputError(f"the parents of {self.variable!r} must be different other variables")
-        if not np.isfinite(p).all() or (p < 0).any():
+        if p.size and not 0 <= p.min() <= p.max() < np.inf:  # NaN compares as False
             raise InputError(f"the table of {self.variable!r} holds a negative or infinite probability")
         off = np.abs(p.sum(axis=-1) - 1)
-        if off.size and float(off.max()) > SUM_TOLERANCE:
+        if off.size and off.max() > SUM_TOLERANCE:
             row = tuple(int(i) for i in np.unravel_index(int(off.argmax()), off.shape))
             raise InputError(
                 f"the table of {self.variable!r} has a row (parents' states {row}) that sums to "

@@ -8,7 +8,7 @@ The lower half of this file holds the kernels that learners compile into their o
 tables that share a *base*, the joint states of some variables, at the cost of one pass each:
 
 - `split_planes` makes the planes of a base, and `tabulate_planes` counts one more variable within it;
-- `number_rows` and `append_column` number the rows by a base, and `tabulate_numbers` counts within it;
+- `index_rows` and `append_column` number the rows by a base, and `tabulate_index` counts within it;
 - `tabulate_pair` counts two variables, `tabulate_occurring` any number of them, however many states.
 
 Joint states that no row shows are left out of a base, so that it never has more parts than rows, however
@@ -38,6 +38,7 @@ BLOCK_ROWS = 4096
 MAX_PLANE_CELLS = 160  # `count` uses planes for tables of at most this many cells
 MAX_BASE_PLANES = 48  # of a base that learners share between tables
 MAX_PRIVATE_CELLS = 4096  # tables of at most this many cells are counted in four copies
+MANY_CELLS = 1 << 20  # larger tables are allocated only where there are as many rows
 FEW_STATES = 16  # up to this many joint states, leaving out those that do not occur does not pay
 
 
@@ -140,8 +141,8 @@ def count(columns: Columns, variables: Sequence[int]) -> NDArray[np.int64]:
     [[0, 1], [0, 1]]
     """
     chosen = np.array(variables, dtype=np.int64)
-    shape = _shape(columns, chosen)
-    table = np.zeros(math.prod(shape), dtype=np.int64)
+    shape, cells = _shape(columns, chosen)
+    table = np.zeros(cells, dtype=np.int64)
     _count(columns, chosen, table)
     return table.reshape(shape)
 
@@ -151,21 +152,21 @@ def count_plain(columns: Columns, variables: Sequence[int]) -> NDArray[np.int64]
 
     Parameters, result and errors are those of `count`.
     """
-    shape = _shape(columns, np.array(variables, dtype=np.int64))
+    shape, cells = _shape(columns, np.array(variables, dtype=np.int64))
     index = np.zeros(columns.codes.shape[1], dtype=np.int64)
     for v, r in zip(variables, shape, strict=True):
         index = index * r + columns.codes[v]
-    return np.bincount(index, minlength=math.prod(shape)).reshape(shape)
+    return np.bincount(index, minlength=cells).reshape(shape)
 
 
-def _shape(columns: Columns, chosen: NDArray[np.int64]) -> list[int]:
+def _shape(columns: Columns, chosen: NDArray[np.int64]) -> tuple[list[int], int]:
     shape: list[int] = columns.cardinalities[chosen].tolist()
-    if math.prod(shape) > MAX_TABLE_CELLS:
-        cells = math.prod(shape)
+    cells = math.prod(shape)
+    if cells > MAX_TABLE_CELLS:
         raise InputError(
             f"a table over {len(shape)} variables would have {cells} cells; at most {MAX_TABLE_CELLS}"
         )
-    return shape
+    return shape, cells
 
 
 # What learners compile into their loops ---------------------------------------------------------------
@@ -180,20 +181,20 @@ class Workspace(NamedTuple):
         Planes of a base, from `split_planes`.
     base_sizes : uint32 array, shape (MAX_BASE_PLANES,)
         Rows in each of them.
-    numbers : uint32 array, shape (n,)
-        A number for each row, from `number_rows`.
+    index : uint32 array, shape (n,)
+        A number for each row, from `index_rows`.
     ranks : uint32 array
-        For `number_rows`.
-    table : uint32 array, shape (about 8 n,)
-        The last table counted; a table that does not fit is not counted but has to be taken apart with
-        `tabulate_occurring`.
+        For `index_rows`.
+    table : uint32 array, shape (about 8 n, or n from a million rows on,)
+        The last table counted. A table that does not fit has far fewer rows than cells: it is not counted
+        but the joint states that occur are, with `tabulate_occurring`.
     private : uint32 array, shape (4, MAX_PRIVATE_CELLS)
     block : uint16 array, shape (BLOCK_ROWS,)
     """
 
     base: NDArray[np.uint64]
     base_sizes: NDArray[np.uint32]
-    numbers: NDArray[np.uint32]
+    index: NDArray[np.uint32]  # type: ignore[assignment]  # hides tuple.index, which nothing here uses
     ranks: NDArray[np.uint32]
     table: NDArray[np.uint32]
     private: NDArray[np.uint32]
@@ -201,15 +202,15 @@ class Workspace(NamedTuple):
 
 
 def workspace(columns: Columns) -> Workspace:
-    """Allocate the scratch arrays for one dataset: about 60 bytes a row and 0.1 MB."""
+    """Allocate the scratch arrays for one dataset: at most 60 bytes a row, and 0.1 MB."""
     n = columns.codes.shape[1]
     max_states = int(columns.cardinalities.max(initial=1))
     return Workspace(
         base=np.empty((MAX_BASE_PLANES, columns.planes.shape[1]), dtype=np.uint64),
         base_sizes=np.empty(MAX_BASE_PLANES, dtype=np.uint32),
-        numbers=np.empty(n, dtype=np.uint32),
-        ranks=np.empty(4 * n + 2 * max_states + BLOCK_ROWS, dtype=np.uint32),
-        table=np.empty(8 * n + max_states + BLOCK_ROWS, dtype=np.uint32),
+        index=np.empty(n, dtype=np.uint32),
+        ranks=np.empty(2 * n + min(2 * n, MANY_CELLS) + 2 * max_states + BLOCK_ROWS, dtype=np.uint32),
+        table=np.empty(max(n, min(8 * n, MANY_CELLS)) + BLOCK_ROWS, dtype=np.uint32),
         private=np.empty((4, MAX_PRIVATE_CELLS), dtype=np.uint32),
         block=np.empty(BLOCK_ROWS, dtype=np.uint16),
     )
@@ -255,7 +256,7 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
     -------
     int
         How many joint states of the parents occur (1 without parents, and where there are no rows); -1
-        if there would be too many planes or a variable has none: then use `number_rows`.
+        if there would be too many planes or a variable has none: then use `index_rows`.
     """
     planes, offsets, base, sizes = columns.planes, columns.offsets, space.base, space.base_sizes
     k = parents.shape[0]
@@ -268,7 +269,7 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
             return -1
         if j == 0:
             for s in range(r):
-                base[s, :] = planes[first + s]
+                _copy(planes[first + s], base[s])
                 sizes[s] = columns.plane_sizes[first + s]
         else:
             _split_parts(base, n_parts, planes, first, r, 0, planes.shape[1])
@@ -279,7 +280,7 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
             for c in range(n_split):
                 if sizes[c] > 0:
                     if n_parts < c:
-                        base[n_parts, :] = base[c]
+                        _copy(base[c], base[n_parts])
                         sizes[n_parts] = sizes[c]
                     n_parts += 1
             if n_parts == 0:  # there are no rows: one empty part stands for them
@@ -288,8 +289,21 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
 
 
 @inlined
+def _copy(plane: NDArray[np.uint64], part: NDArray[np.uint64]) -> None:
+    # Assigning a slice would do, but it takes numba seconds to compile the message of its shape check.
+    for w in range(plane.shape[0]):
+        part[w] = plane[w]
+
+
+@inlined
 def _split_parts(
-    base: NDArray[np.uint64], n_parts: int, planes: NDArray[np.uint64], first: int, r: int, start: int, end: int
+    base: NDArray[np.uint64],
+    n_parts: int,
+    planes: NDArray[np.uint64],
+    first: int,
+    r: int,
+    start: int,
+    end: int,
 ) -> None:
     # Splits each part by the states of one more variable, planes `first` to `first + r - 1`, in place:
     # from the last part to the first, so that each is read before its place is taken.
@@ -319,7 +333,7 @@ def tabulate_planes(columns: Columns, variable: int, n_planes: int, space: Works
     Returns
     -------
     bool
-        False, and nothing is counted, if the variable has no planes: then use `tabulate_numbers`.
+        False, and nothing is counted, if the variable has no planes: then use `tabulate_index`.
     """
     first = columns.offsets[variable]
     r = columns.offsets[variable + 1] - first
@@ -400,8 +414,8 @@ def tabulate_pair(columns: Columns, first: int, second: int, table: NDArray[Any]
 
 
 @inlined
-def number_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace) -> int:
-    """Give each row a number by the joint state of some variables, in ``space.numbers``.
+def index_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace) -> int:
+    """Give each row a number by the joint state of some variables, in ``space.index``.
 
     Rows have the same number exactly if they agree in all variables. Joint states that do not occur get
     no number, except that up to `FEW_STATES` joint states are numbered as they are. Works for any
@@ -418,7 +432,7 @@ def number_rows(columns: Columns, variables: NDArray[np.int64], space: Workspace
     int
         All numbers are below this; it is at least 1 and at most max(n, `FEW_STATES`).
     """
-    index, room = space.numbers, space.ranks.shape[0]
+    index, room = space.index, space.ranks.shape[0]
     for i in range(index.shape[0]):
         index[i] = 0
     n_numbers = 1
@@ -446,7 +460,7 @@ def append_column(columns: Columns, variable: int, space: Workspace) -> None:
 
     The new number is the old one times the variable's states, plus the state; it must stay below 2^32.
     """
-    index, column = space.numbers, columns.codes[variable]
+    index, column = space.index, columns.codes[variable]
     r = np.uint32(columns.cardinalities[variable])
     for i in range(index.shape[0]):
         index[i] = index[i] * r + np.uint32(column[i])
@@ -510,10 +524,10 @@ def _rank_by_sorting(
 
 
 @inlined
-def tabulate_numbers(columns: Columns, variable: int, n_numbers: int, space: Workspace) -> bool:
+def tabulate_index(columns: Columns, variable: int, n_numbers: int, space: Workspace) -> bool:
     """Count a variable within each number of the rows.
 
-    Fills ``space.table``: cell ``c * r + s`` is the number of rows with the number c in ``space.numbers``
+    Fills ``space.table``: cell ``c * r + s`` is the number of rows with the number c in ``space.index``
     and the variable, of r states, in state s.
 
     Parameters
@@ -529,7 +543,7 @@ def tabulate_numbers(columns: Columns, variable: int, n_numbers: int, space: Wor
     bool
         False, and nothing is counted, if the table does not fit: then use `tabulate_occurring`.
     """
-    index, column, table = space.numbers, columns.codes[variable], space.table
+    index, column, table = space.index, columns.codes[variable], space.table
     n = index.shape[0]
     r = columns.cardinalities[variable]
     size = n_numbers * r
@@ -561,7 +575,7 @@ def tabulate_occurring(columns: Columns, variables: NDArray[np.int64], space: Wo
     """Count the joint states that occur, of any number of variables with any number of states.
 
     Fills the first cells of ``space.table`` with the number of rows in each joint state that occurs, in
-    an order of no meaning, among them at most `FEW_STATES` zeros; overwrites ``space.numbers``.
+    an order of no meaning, among them at most `FEW_STATES` zeros; overwrites ``space.index``.
 
     Parameters
     ----------
@@ -574,8 +588,8 @@ def tabulate_occurring(columns: Columns, variables: NDArray[np.int64], space: Wo
     int
         How many cells were filled; at least 1 and at most max(n, `FEW_STATES`).
     """
-    index, table = space.numbers, space.table
-    n_numbers = number_rows(columns, variables, space)
+    index, table = space.index, space.table
+    n_numbers = index_rows(columns, variables, space)
     _clear(table, n_numbers)
     for i in range(index.shape[0]):
         table[index[i]] += np.uint32(1)
@@ -673,7 +687,8 @@ def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray
             first = columns.offsets[variables[j]]
             r = columns.cardinalities[variables[j]]
             if j == 0:
-                base[:r, : end - start] = columns.planes[first : first + r, start:end]
+                for s in range(r):
+                    _copy(columns.planes[first + s, start:end], base[s])
             elif j < last:
                 _split_parts(base, n_parts, columns.planes, first, r, start, end)
             else:

@@ -56,6 +56,8 @@ Test = Literal["g2", "pearson"]
 # that matters: at most this far above its critical value, a statistic counts as equal to it.
 ROUNDING = 1e-6
 
+MAX_UNRANKED = 512  # measured: above it, empty cells cost more than leaving them out
+
 
 @dataclass(frozen=True, slots=True)
 class TestResult:
@@ -241,26 +243,31 @@ def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
     Returns
     -------
     float64 array, shape (p, p)
-        At [i, j] for i < j; 0 elsewhere.
+        Symmetric, the diagonal 0.
 
     Examples
     --------
     >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
     >>> pair_statistics(prepare(data), "pearson").tolist()
-    [[0.0, 10.0], [0.0, 0.0]]
+    [[0.0, 10.0], [10.0, 0.0]]
     """
-    return _pair_statistics(columns, statistic_workspace(columns), test == "pearson")
+    upper = _pair_statistics(columns, statistic_workspace(columns), test == "pearson")
+    return upper + upper.T
 
 
-def dependent_pairs(columns: Columns, *, alpha: float, test: Test = "g2") -> NDArray[np.bool_]:
+def dependent_pairs(
+    statistics: NDArray[np.float64], cardinalities: NDArray[np.int64], alpha: float
+) -> NDArray[np.bool_]:
     """Say which pairs of variables a test finds dependent, conditioned on nothing.
 
     Parameters
     ----------
-    columns : Columns
+    statistics : float64 array, shape (p, p)
+        From `pair_statistics`.
+    cardinalities : int64 array, shape (p,)
+        Declared states of each variable.
     alpha : float
         Strictly between 0 and 1.
-    test : {"g2", "pearson"}
 
     Returns
     -------
@@ -269,14 +276,12 @@ def dependent_pairs(columns: Columns, *, alpha: float, test: Test = "g2") -> NDA
 
     Examples
     --------
-    >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
-    >>> dependent_pairs(prepare(data), alpha=0.01).tolist()
+    >>> dependent_pairs(np.array([[0.0, 10.0], [10.0, 0.0]]), np.array([2, 2]), 0.01).tolist()
     [[False, True], [True, False]]
     """
-    sizes, kind = np.unique(columns.cardinalities, return_inverse=True)
+    sizes, kind = np.unique(cardinalities, return_inverse=True)
     limits = critical_values(alpha, np.multiply.outer(sizes - 1, sizes - 1)) + ROUNDING
-    above = pair_statistics(columns, test) > limits[np.ix_(kind, kind)]
-    return above | above.T
+    return statistics > limits[np.ix_(kind, kind)]
 
 
 def statistic_given(columns: Columns, x: int, y: int, given: Sequence[int], test: Test = "g2") -> float:
@@ -379,12 +384,27 @@ def conditional_statistic(
     if 0 < parts[0] * r_x * r_y <= MAX_PLANE_CELLS and tabulate_planes(columns, y, parts[0] * r_x, space):
         return _table_statistic(parts[0], r_x, r_y, work, is_pearson)
     if parts[1] == 0:
-        parts[1] = index_rows(columns, given, space)
-        append_column(columns, x, space)
+        parts[1] = _number_rows(columns, given, x, space)
     if tabulate_index(columns, y, parts[1] * r_x, space):
         return _table_statistic(parts[1], r_x, r_y, work, is_pearson)
     parts[1] = 0  # what follows overwrites the index
     return _statistic_by_row(columns, given, x, y, space, is_pearson)
+
+
+@inlined
+def _number_rows(columns: Columns, given: NDArray[np.int64], x: int, space: Workspace) -> int:
+    # Up to a number of joint states, counting those that do not occur costs less than finding them.
+    n_joint = 1.0
+    for v in given:
+        n_joint *= columns.cardinalities[v]
+    if n_joint * columns.cardinalities[x] <= min(MAX_UNRANKED, columns.codes.shape[1] // 16):
+        space.index[:] = 0
+        for v in given:
+            append_column(columns, v, space)
+    else:
+        n_joint = index_rows(columns, given, space)
+    append_column(columns, x, space)
+    return int(n_joint)
 
 
 @inlined
@@ -534,4 +554,4 @@ def _compile() -> None:
         columns = prepare(Dataset(("a", "b", "c"), states, np.zeros((2, 3), dtype=code_dtype(n_states))))
         statistic_ceilings(columns, "g2")
         statistic_given(columns, 0, 1, [2])
-        dependent_pairs(columns, alpha=0.05)
+        pair_statistics(columns)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Annotated
 
 import numpy as np
@@ -37,7 +38,6 @@ def draw_dirichlet(
     Returns
     -------
     dict of str to Cpt
-        In the graph's order.
 
     Notes
     -----
@@ -54,9 +54,14 @@ def draw_dirichlet(
     ((2, 3), [1.0, 1.0])
     """
     n_states = dict(zip(graph.names, cardinalities.tolist(), strict=True))
+    parents = {name: graph.parents(name) for name in graph.names}
+    shapes = {name: [n_states[parent] for parent in own] for name, own in parents.items()}
     cpts = {}
-    for name, r in n_states.items():
-        parents = graph.parents(name)
-        shape = tuple(n_states[parent] for parent in parents)
-        cpts[name] = Cpt(name, parents, rng.dirichlet(np.full(r, concentration), size=shape))
+    # One call for all variables with as many states: calls cost more than the rows of small tables.
+    for r in sorted(set(n_states.values())):
+        alike = [name for name in graph.names if n_states[name] == r]
+        ends = np.cumsum([math.prod(shapes[name]) for name in alike])
+        rows = rng.dirichlet(np.full(r, concentration), size=int(ends[-1]))
+        for name, table in zip(alike, np.split(rows, ends[:-1]), strict=True):
+            cpts[name] = Cpt(name, parents[name], table.reshape(*shapes[name], r))
     return cpts

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from generators.errors import InputError
+from generators.files.text import listed
 from generators.graph import Graph
 from generators.network import MAX_CPT_CELLS, SUM_TOLERANCE, Cpt, Network
 
@@ -34,7 +35,7 @@ def row_label(variable: str, parents_states: Sequence[str]) -> str:
     """
     if not parents_states:
         return repr(variable)
-    return f"({', '.join(state if state.isprintable() else repr(state) for state in parents_states)})"
+    return f"({listed(parents_states)})"
 
 
 def size_fault(variable: str, shape: Sequence[int], taken: int) -> str | None:

@@ -6,8 +6,7 @@ Fields are separated by commas and quoted as RFC 4180 says. Blank lines at the e
 
 from __future__ import annotations
 
-import io
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -16,7 +15,7 @@ from numpy.typing import NDArray
 
 from generators.dataset import MAX_STATES, Dataset, code_dtype
 from generators.errors import InputError
-from generators.files.text import NUMBER, csv_field, csv_rows, decode, shown
+from generators.files.text import NUMBER, csv_field, csv_rows, decode, listed, shown
 from generators.network import check_states
 from generators.settings import nearest
 
@@ -24,6 +23,9 @@ from generators.settings import nearest
 MANY_DECIMALS = 20
 _LISTED_STATES = 10
 _ROWS_PER_PIECE = 1 << 16
+# Longer cells are free text, not states; so many bytes still take about a second.
+MAX_CELL_BYTES = 1 << 16
+_FIRST_BYTES = np.array([(1 << 8 * n) - 1 for n in range(9)], dtype=np.uint64)
 _COMMA, _QUOTE, _LINE_FEED, _RETURN = b',"\n\r'
 
 
@@ -87,12 +89,13 @@ def parse_data(
 
 @dataclass(frozen=True, slots=True)
 class _Rows:
-    """Where the records of a file are: int64 arrays, the header's record first."""
+    """Where the records of a file are, the header's first: int64 arrays of offsets."""
 
     content: bytes
     where: str
     starts: NDArray[np.int64]
-    ends: NDArray[np.int64]
+    ends: NDArray[np.int64]  # of each record's last field
+    commas: NDArray[np.int64]
     n_fields: NDArray[np.int64]
 
     @property
@@ -109,7 +112,6 @@ def _place(content: bytes, where: str, offset: int) -> str:
 
 
 def _rows_of(content: bytes, where: str) -> _Rows:
-    # pandas fills short rows and cuts long ones without a word, so the fields are counted here.
     data = np.frombuffer(content, dtype=np.uint8)
     quotes = np.flatnonzero(data == _QUOTE)
     _check_quotes(content, where, quotes)
@@ -127,11 +129,11 @@ def _rows_of(content: bytes, where: str) -> _Rows:
     if not content.endswith(b"\n"):
         ends = np.append(ends, len(content))
     starts = np.append(0, ends[:-1] + 1)
-    n_fields = np.diff(np.searchsorted(outside(_COMMA), ends), prepend=0) + 1
     n_records = int(np.searchsorted(starts, len(content.rstrip(b"\r\n"))))  # no blank lines at the end
-    starts, ends, n_fields = starts[:n_records], ends[:n_records], n_fields[:n_records]
-    content = content[: int(ends[-1]) + 1]
-    return _Rows(content, where, starts, ends, n_fields)
+    starts, ends = starts[:n_records], ends[:n_records]
+    commas = outside(_COMMA)
+    n_fields = np.diff(np.searchsorted(commas, ends), prepend=0) + 1
+    return _Rows(content, where, starts, ends - np.isin(ends - 1, returns), commas, n_fields)
 
 
 def _check_quotes(content: bytes, where: str, quotes: NDArray[np.int64]) -> None:
@@ -195,30 +197,53 @@ def _declared(
 
 
 def _cells(rows: _Rows, names: Sequence[str]) -> Iterator[tuple[NDArray[np.int64], list[str]]]:
-    """Give each column as positions in a list of the different texts it holds."""
+    """Give each column as positions in a list of the different texts it holds.
+
+    Far quicker than making a Python text of every cell, which is what reading by pandas comes to.
+    """
+    commas = rows.commas.reshape(rows.n_rows + 1, len(names) - 1)[1:]
+    # One 8-byte word from each offset on; the file is padded so that the last ones stay inside.
+    words = np.ndarray(len(rows.content) + 1, dtype="<u8", buffer=rows.content + bytes(8), strides=(1,))
+    for j, name in enumerate(names):
+        starts = rows.starts[1:] if j == 0 else commas[:, j - 1] + 1
+        ends = rows.ends[1:] if j == len(names) - 1 else commas[:, j]
+        longest = int(np.argmax(ends - starts))
+        n_bytes = int(ends[longest] - starts[longest])
+        if n_bytes > MAX_CELL_BYTES:
+            raise InputError(
+                f"{rows.place(longest + 1)}: column {shown(name)} has a cell of {n_bytes} bytes; "
+                f"at most {MAX_CELL_BYTES} are accepted."
+            )
+        seen, first = _numbered(words, starts, ends)
+        raw = [rows.content[start:end] for start, end in zip(starts[first].tolist(), ends[first].tolist())]
+        yield seen, [_unquoted(cell) for cell in raw]
+
+
+def _numbered(
+    words: NDArray[np.uint64], starts: NDArray[np.int64], ends: NDArray[np.int64]
+) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return a number per row, equal for equal cells, and the first row of each number."""
     import pandas as pd
 
-    try:
-        # Not dtype="category", though it is faster: that takes 1, 01 and 1.0 for one number.
-        frame = pd.read_csv(
-            io.BytesIO(rows.content),
-            header=0,
-            names=list(range(len(names))),
-            index_col=False,
-            dtype=object,
-            keep_default_na=False,
-            na_filter=False,
-            skip_blank_lines=False,
-            low_memory=False,
-            encoding="utf-8",
-        )
-    except pd.errors.ParserError as error:
-        raise InputError(f"{rows.where}: not CSV ({error}).") from None
-    if len(frame) != rows.n_rows:
-        raise AssertionError(f"{len(frame)} rows were parsed of {rows.n_rows}")
-    for j in range(len(names)):
-        seen, texts = pd.factorize(frame[j])
-        yield seen, texts.tolist()
+    lengths = ends - starts
+    seen, different = pd.factorize(words[starts] & _FIRST_BYTES[np.minimum(lengths, 8)])
+    count, offset = len(different), 8
+    longer = np.flatnonzero(lengths > offset)
+    while len(longer):  # tell apart by the next eight bytes what is alike so far; no cell holds a NUL
+        word = words[starts[longer] + offset] & _FIRST_BYTES[np.minimum(lengths[longer] - offset, 8)]
+        next_bytes, different = pd.factorize(word)
+        pairs, different = pd.factorize(seen[longer] * len(different) + next_bytes)
+        seen[longer] = count + pairs
+        count, offset = count + len(different), offset + 8
+        longer = longer[lengths[longer] > offset]
+    seen, different = pd.factorize(seen)
+    first = np.empty(len(different), dtype=np.int64)
+    first[seen[::-1]] = np.arange(len(seen))[::-1]
+    return seen, first
+
+
+def _unquoted(cell: bytes) -> str:
+    return (cell[1:-1].replace(b'""', b'"') if cell.startswith(b'"') else cell).decode()
 
 
 @dataclass(frozen=True, slots=True)
@@ -232,7 +257,7 @@ class _Column:
 def _column(
     name: str, seen: NDArray[np.int64], texts: Sequence[str], declared: tuple[str, ...] | None, rows: _Rows
 ) -> _Column:
-    own = declared or _ordered([text for text in texts if text])
+    own = declared or _ordered({text for text in texts if text})  # one text may stand with quotes and without
     if len(own) > MAX_STATES:
         raise InputError(
             f"{rows.where}: column {shown(name)} has {len(own)} states; at most {MAX_STATES} are accepted."
@@ -245,15 +270,15 @@ def _column(
     for k, text in enumerate(texts):
         if text not in position:
             record = int((seen == k).argmax()) + 1
-            listed = ", ".join(own[:_LISTED_STATES]) + (", ..." if len(own) > _LISTED_STATES else "")
+            accepted = listed(own[:_LISTED_STATES]) + (", ..." if len(own) > _LISTED_STATES else "")
             raise InputError(
                 f"{rows.place(record)}: column {shown(name)} holds {shown(text)}, which is none of its "
-                f"declared states ({listed}).{nearest(text, own)}"
+                f"declared states ({accepted}).{nearest(text, own)}"
             )
     return _Column(name, own, seen, np.array([position[text] for text in texts], dtype=np.int64))
 
 
-def _ordered(texts: Sequence[str]) -> tuple[str, ...]:
+def _ordered(texts: Collection[str]) -> tuple[str, ...]:
     if all(NUMBER.fullmatch(text) for text in texts):
         return tuple(sorted(texts, key=lambda text: (float(text), text)))
     return tuple(sorted(texts))

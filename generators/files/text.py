@@ -6,7 +6,7 @@ import csv
 import io
 import os
 import re
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 
 from generators.errors import InputError
 
@@ -80,6 +80,17 @@ def shown(text: str) -> str:
     """
     limit = 40
     return repr(text if len(text) <= limit else text[: limit - 1] + "…")
+
+
+def listed(texts: Iterable[str]) -> str:
+    """Return texts with commas between them, on one line whatever they hold.
+
+    Examples
+    --------
+    >>> listed(["low", "very high"])
+    'low, very high'
+    """
+    return ", ".join(text if text.isprintable() else repr(text) for text in texts)
 
 
 def csv_field(text: str) -> str:

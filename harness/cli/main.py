@@ -131,6 +131,8 @@ def _expected(error: Exception) -> int | None:
 
     if isinstance(error, MachineStop):
         return 3
-    if isinstance(error, OSError) and error.filename is not None:
+    from generators.files.atomic import MACHINE_ERRORS
+
+    if isinstance(error, OSError) and error.errno in MACHINE_ERRORS:
         return 3
     return None

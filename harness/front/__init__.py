@@ -15,7 +15,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-from ._own import foreign_package
+from ._own import bind_packages
 
 if TYPE_CHECKING:
     from generators.cpts import generate_network as generate_network
@@ -72,7 +72,7 @@ def __getattr__(name: str) -> Any:
         raise AttributeError(f"module 'arcassay' has no attribute {name!r}")
     import importlib
 
-    foreign = foreign_package()
+    foreign = bind_packages()
     if foreign is not None:
         raise ImportError(foreign)
     module, _, attribute = _PUBLIC[name].partition(":")

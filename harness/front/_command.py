@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import sys
 
-from ._own import foreign_package
+from ._own import bind_packages
 
 # Before numpy is imported by anything: learners are timed on one thread, and so is what surrounds them.
 _THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMEXPR_NUM_THREADS")
@@ -13,7 +13,7 @@ _THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS
 
 def main() -> None:
     """Run the command line."""
-    foreign = foreign_package()
+    foreign = bind_packages()
     if foreign is not None:
         sys.stderr.write(f"arcassay: {foreign}\n")
         sys.exit(2)

@@ -3,16 +3,15 @@
 1. *Skeleton* (Spirtes, Glymour and Scheines 2000; by levels as in Colombo and Maathuis 2014). All pairs
    are joined; at level k an edge x - y goes if x and y test independent given some k neighbours of x, or
    some k neighbours of y. Who is a neighbour is fixed when a level begins, so the skeleton does not
-   depend on the order of the columns. The set that separated a pair is the first found: those among the
-   neighbours of the pair's earlier column come first, in lexicographic order of their columns, then those
-   among the neighbours of the later one.
+   depend on the order of the columns. The set that separated a pair is the first found, in an order that
+   does not depend on it either: sets of strongly associated neighbours come first (see `find_skeleton`).
 2. *Colliders*. Where x - z - y, x and y are not adjacent, and z is not in the set that separated x and y,
    the edges are directed x -> z <- y. An edge that two colliders direct against each other is left
    undirected for the next step.
 3. *Meek's rules* (`generators.classes.meek_rules`) direct what follows.
 
-Only step 1 is free of the columns' order: the separating sets, and what `meek_rules` makes of colliders
-that contradict each other, are not.
+So the order of the columns enters only where variables are associated to the same strength, and where
+colliders contradict each other, in what `meek_rules` makes of that.
 """
 
 from __future__ import annotations
@@ -38,10 +37,15 @@ from harness.independence import (
     conditional_statistic,
     critical_value,
     dependent_pairs,
+    pair_statistics,
     statistic_ceilings,
     statistic_workspace,
 )
 from harness.learners.specification import learner
+
+
+DECIMALS = 6  # to which statistics are compared when they are ordered
+MIN_SHARING = 3  # sets that must share a bound for it to be worth its cost; measured
 
 
 @learner(
@@ -133,6 +137,12 @@ def find_skeleton(
 ) -> Skeleton:
     """Find the skeleton level by level, with the settings of `pc`.
 
+    Variables take their turns as x in ascending order of the sum of their pairwise statistics; each looks
+    at sets of its neighbours, which stand in descending order of their statistic with x, in lexicographic
+    order. Statistics that agree to six decimals are equal; the earlier column then comes first. The first
+    set that separates x and y counts, so strong explanations come before weak ones, and few tests are
+    needed to find one.
+
     Parameters
     ----------
     columns : Columns
@@ -145,7 +155,10 @@ def find_skeleton(
     """
     n = columns.codes.shape[1]
     max_cells = n / min_per_cell if min_per_cell > 0 else np.inf
-    adjacent = dependent_pairs(columns, alpha=alpha, test=test) | _untestable_pairs(columns, max_cells)
+    statistics = pair_statistics(columns, test)
+    adjacent = dependent_pairs(statistics, columns.cardinalities, alpha)
+    adjacent |= _untestable_pairs(columns.cardinalities, max_cells)
+    order = np.argsort(np.round(statistics.sum(axis=1), DECIMALS), kind="stable")
     ceilings = statistic_ceilings(columns, test)
     work = statistic_workspace(columns)
     separated: list[tuple[NDArray[np.int64], NDArray[np.int64]]] = []
@@ -154,9 +167,17 @@ def find_skeleton(
         critical = attainable_critical_values(
             alpha, columns.cardinalities, n_given, ceilings.max(initial=0.0)
         )
-        at, nodes = neighbour_lists(adjacent)
         pairs, given, is_any_made = _separate(
-            columns, at, nodes, n_given, adjacent, critical, ceilings, max_cells, work, test == "pearson"
+            columns,
+            statistics,
+            order,
+            n_given,
+            adjacent,
+            critical,
+            ceilings,
+            max_cells,
+            work,
+            test == "pearson",
         )
         if not is_any_made:
             break
@@ -215,22 +236,20 @@ def direct_colliders(adjacent: NDArray[np.bool_], colliders: NDArray[np.int64]) 
     return adjacent & ~(into.T & ~into)
 
 
-def _untestable_pairs(columns: Columns, max_cells: float) -> NDArray[np.bool_]:
-    p = len(columns.cardinalities)
-    if max_cells == np.inf:
-        return np.zeros((p, p), dtype=np.bool_)
-    sizes = columns.cardinalities
+def _untestable_pairs(cardinalities: NDArray[np.int64], max_cells: float) -> NDArray[np.bool_]:
+    untestable = np.multiply.outer(cardinalities, cardinalities) > max_cells
     # A variable of one state is independent of everything, whatever the rows.
-    is_varied = sizes > 1
-    untestable = np.multiply.outer(sizes, sizes) > max_cells
-    return untestable & np.logical_and.outer(is_varied, is_varied) & ~np.eye(p, dtype=np.bool_)
+    untestable[cardinalities == 1] = False
+    untestable[:, cardinalities == 1] = False
+    np.fill_diagonal(untestable, False)
+    return untestable
 
 
 @kernel
 def _separate(
     columns: Columns,
-    at: Offsets,
-    nodes: Nodes,
+    statistics: NDArray[np.float64],
+    order: NDArray[np.int64],
     n_given: int,
     adjacent: NDArray[np.bool_],
     critical: CriticalValues,
@@ -239,28 +258,35 @@ def _separate(
     work: StatisticWorkspace,
     is_pearson: bool,
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], bool]:
-    # One level: takes from `adjacent` the pairs that some n_given neighbours (as in `nodes`) separate.
-    # Returns these pairs, what separated them, and whether there was any test to make.
+    # One level: takes from `adjacent` the pairs that sets of n_given neighbours separate. Returns these
+    # pairs, what separated them, and whether there was any test to make.
     p = adjacent.shape[0]
     sizes = columns.cardinalities
+    at, nodes = neighbour_lists(adjacent)
     frozen = adjacent.copy()
     pairs = np.empty((nodes.shape[0] // 2, 2), dtype=np.int64)
-    givens = np.empty((nodes.shape[0] // 2, n_given), dtype=np.int64)
+    separators = np.empty((nodes.shape[0] // 2, n_given), dtype=np.int64)
     n_separated = 0
     is_any_made = False
+    is_done = np.zeros(p, dtype=np.bool_)
+    is_given = np.zeros(p, dtype=np.bool_)
     chosen = np.empty(n_given, dtype=np.int64)
     given = np.empty(n_given, dtype=np.int64)
-    is_given = np.zeros(p, dtype=np.bool_)
-    for x in range(p):
-        neighbours = nodes[at[3 * x] : at[3 * x + 3]]
-        n_neighbours = neighbours.shape[0]
-        if n_neighbours <= n_given:
+    gains = np.empty(p)
+    for x in order:
+        is_done[x] = True
+        neighbours = _strongest_first(nodes[at[3 * x] : at[3 * x + 3]], statistics[x])
+        n_left = 0
+        for y in neighbours:
+            n_left += adjacent[x, y]
+        if neighbours.shape[0] <= n_given:
             continue
         for j in range(n_given):
             chosen[j] = j
-        while True:
-            # Given this many cells, more variables only make more: where the first few of `given` are too
-            # many for any partner (2 states or more), so are all sets that begin with them.
+        changed = 0
+        while n_left > 0 and changed >= 0:
+            # Where the first of the given variables alone make too many cells for any partner, which has
+            # 2 states or more, so do all sets that begin with them.
             cells, last = np.float64(sizes[x]), n_given - 1
             for j in range(n_given):
                 given[j] = neighbours[chosen[j]]
@@ -268,30 +294,73 @@ def _separate(
                 if 2 * cells > max_cells:
                     last = j
                     break
-            if 2 * cells <= max_cells:
-                is_given[given] = True
-                work.parts[:] = 0
-                df_per_state = cells / sizes[x] * (sizes[x] - 1)
-                for y in neighbours:
-                    if not adjacent[x, y] or is_given[y] or cells * sizes[y] > max_cells:
-                        continue
-                    if y < x and _all_adjacent(frozen, y, given):
-                        continue  # this very test was made when it was y's turn
-                    is_any_made = True
-                    limit = critical_value(critical, df_per_state * (sizes[y] - 1))
-                    is_separated = limit >= min(ceilings[x], ceilings[y])
-                    if not is_separated:
-                        statistic = conditional_statistic(columns, given, x, y, work, is_pearson)
-                        is_separated = statistic <= limit + ROUNDING
-                    if is_separated:
-                        adjacent[x, y] = adjacent[y, x] = False
-                        pairs[n_separated, 0], pairs[n_separated, 1] = min(x, y), max(x, y)
-                        givens[n_separated] = given
-                        n_separated += 1
-                is_given[given] = False
-            if not _next_combination(chosen, last, n_neighbours):
-                break
-    return pairs[:n_separated].copy(), givens[:n_separated].copy(), is_any_made
+            if 2 * cells > max_cells:
+                changed = _next_combination(chosen, last, neighbours.shape[0])
+                continue
+            if changed < n_given - 1 and not is_pearson:
+                _find_gains(columns, statistics, given[:-1], x, neighbours, chosen, work, gains)
+            work.parts[:] = 0
+            is_given[given] = True
+            df = cells / sizes[x] * (sizes[x] - 1)
+            for i in range(neighbours.shape[0]):
+                y = neighbours[i]
+                if not adjacent[x, y] or is_given[y] or cells * sizes[y] > max_cells:
+                    continue
+                if is_done[y] and _all_adjacent(frozen, y, given):
+                    continue  # this very test was made when it was y's turn
+                is_any_made = True
+                limit = critical_value(critical, df * (sizes[y] - 1))
+                if gains[i] - gains[chosen[n_given - 1]] > limit + ROUNDING and not is_pearson:
+                    continue
+                is_separated = limit >= min(ceilings[x], ceilings[y])
+                if not is_separated:
+                    statistic = conditional_statistic(columns, given, x, y, work, is_pearson)
+                    is_separated = statistic <= limit + ROUNDING
+                if is_separated:
+                    adjacent[x, y] = adjacent[y, x] = False
+                    pairs[n_separated, 0], pairs[n_separated, 1] = min(x, y), max(x, y)
+                    separators[n_separated] = given
+                    n_separated += 1
+                    n_left -= 1
+            is_given[given] = False
+            changed = _next_combination(chosen, n_given - 1, neighbours.shape[0])
+    return pairs[:n_separated].copy(), separators[:n_separated].copy(), is_any_made
+
+
+@inlined
+def _strongest_first(neighbours: Nodes, statistics: NDArray[np.float64]) -> Nodes:
+    strength = np.empty(neighbours.shape[0])
+    for i in range(neighbours.shape[0]):
+        strength[i] = -np.round(statistics[neighbours[i]], DECIMALS)
+    return neighbours[np.argsort(strength, kind="mergesort")]
+
+
+@inlined
+def _find_gains(
+    columns: Columns,
+    statistics: NDArray[np.float64],
+    given: NDArray[np.int64],
+    x: int,
+    neighbours: Nodes,
+    chosen: NDArray[np.int64],
+    work: StatisticWorkspace,
+    gains: NDArray[np.float64],
+) -> None:
+    # G2 is 2 n times a mutual information I of the counts, so the chain rule holds for it:
+    # I(x; y | S, w) = I(x; y | S) + I(x; w | S, y) - I(x; w | S) >= I(x; y | S) - I(x; w | S).
+    # Where the right-hand side is significant, the left is, and need not be counted. Here: G2 of x with
+    # all neighbours given S, which serves every w.
+    if given.shape[0] == 0:
+        for i in range(neighbours.shape[0]):
+            gains[i] = statistics[x, neighbours[i]]
+        return
+    n_next = neighbours.shape[0] - 1 - chosen[given.shape[0] - 1]
+    if n_next < MIN_SHARING:
+        gains[: neighbours.shape[0]] = 0.0
+        return
+    work.parts[:] = 0
+    for i in range(neighbours.shape[0]):
+        gains[i] = conditional_statistic(columns, given, x, neighbours[i], work, False)
 
 
 @inlined
@@ -303,18 +372,18 @@ def _all_adjacent(adjacent: NDArray[np.bool_], y: int, others: NDArray[np.int64]
 
 
 @inlined
-def _next_combination(chosen: NDArray[np.int64], last: int, n: int) -> bool:
-    # Goes on in lexicographic order to the next choice out of n that differs at `last` or before.
+def _next_combination(chosen: NDArray[np.int64], last: int, n: int) -> int:
+    # Goes on in lexicographic order to the next choice out of n that differs at `last` or before; returns
+    # the first place that differs, or -1 at the end.
     k = chosen.shape[0]
     j = last
     while j >= 0 and chosen[j] == n - k + j:
         j -= 1
-    if j < 0:
-        return False
-    chosen[j] += 1
-    for i in range(j + 1, k):
-        chosen[i] = chosen[i - 1] + 1
-    return True
+    if j >= 0:
+        chosen[j] += 1
+        for i in range(j + 1, k):
+            chosen[i] = chosen[i - 1] + 1
+    return j
 
 
 @kernel

@@ -170,8 +170,9 @@ def _without_defaults(declared: Mapping[str, Setting], settings: Mapping[str, An
 
 
 def _name(stem: str, settings: Mapping[str, Any]) -> str:
-    words = (
-        f"{name} {str(value).lower() if isinstance(value, bool) else value}"
-        for name, value in settings.items()
-    )
-    return ", ".join([stem, *words])
+    return ", ".join([stem, *(f"{name} {_shown(value)}" for name, value in settings.items())])
+
+
+def _shown(value: Any) -> str:
+    text = str(value).lower() if isinstance(value, bool) else str(value)
+    return text if text.isprintable() else repr(value)

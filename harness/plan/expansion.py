@@ -188,7 +188,7 @@ def _files(section: Section, folder: Path) -> list[str]:
         path = section.parse(Setting("file", str), text, position=position)
         if path is None:
             continue
-        absolute = os.path.realpath(os.path.join(folder, path.replace("\0", "")))
+        absolute = os.path.abspath(os.path.join(folder, path))
         if not os.path.isfile(absolute):
             section.fault("file", f"no such file: {path!r}", position)
             continue
@@ -323,16 +323,14 @@ def _factors(levels: Sequence[Networks]) -> list[dict[str, Any]]:
 
 
 def _with_short_paths(levels: Sequence[Networks]) -> Sequence[Networks]:
-    """Put a file's stem for its path, or as many folders with it as tell the files apart."""
-    paths = [Path(level["file"]).with_suffix("") for level in levels if "file" in level]
-    if not paths:
-        return levels
-    most = max(len(path.parts) for path in paths)
-    for n_parts in range(1, most + 1):
-        short = ["/".join(path.parts[-n_parts:]) for path in paths]
-        if len(set(short)) == len(short):
-            return [{"file": own} for own in short]
-    return [{"file": level["file"]} for level in levels]  # the same stem with two endings
+    """Put a file's stem for its path, or as much more of the path as tells the files apart."""
+    paths = [Path(level["file"]) for level in levels if "file" in level]
+    for n_parts in range(1, max((len(path.parts) for path in paths), default=0) + 1):
+        for ends in ([path.with_suffix("") for path in paths], paths):
+            short = ["/".join(path.parts[-n_parts:]) for path in ends]
+            if len(set(short)) == len(short):
+                return [{"file": own} for own in short]
+    return levels
 
 
 def _all_settings() -> list[str]:

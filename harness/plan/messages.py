@@ -26,7 +26,7 @@ class Faults:
     """
 
     file: str
-    lines: list[str] = field(default_factory=list)
+    _lines: dict[str, None] = field(default_factory=dict)
 
     def add(self, where: str, what: str) -> None:
         """Note a fault at a key; the same line is kept once.
@@ -36,14 +36,18 @@ class Faults:
         >>> faults = Faults("plan.toml")
         >>> faults.add("networks.replicats", "unknown key. Did you mean 'replicates'?")
         >>> faults.lines
-        ["plan.toml: networks.replicats: unknown key. Did you mean 'replicates'?"]
+        ("plan.toml: networks.replicats: unknown key. Did you mean 'replicates'?",)
         """
         end = "" if what.endswith((".", "?")) else "."
         line = f"{self.file}: {where}: {what}{end}"
         if len(line) > LONGEST_FAULT:
             line = f"{line[:LONGEST_FAULT]}..."
-        if line not in self.lines:
-            self.lines.append(line)
+        self._lines[line] = None
+
+    @property
+    def lines(self) -> tuple[str, ...]:
+        """The faults so far, a complete line each."""
+        return tuple(self._lines)
 
     def add_all(self, where: str, error: InputError) -> None:
         """Note every fault of an `InputError` at a key."""

@@ -50,7 +50,7 @@ def network_key(seed: int, networks: Mapping[str, Any], replicate: int) -> bytes
         16 bytes.
     """
     if is_given(networks):
-        return digest("network", {"seed": seed, "content": given_network(networks).key()})
+        return digest("network", {"seed": seed, "content": _content(given_network(networks))})
     return digest("network", {"seed": seed, "networks": _recipe(networks), "replicate": replicate})
 
 
@@ -165,6 +165,11 @@ def _read_file(path: str) -> tuple[Network, tuple[str, ...]]:
 @functools.lru_cache(maxsize=16)
 def _read(path: str, changed: int, size: int) -> tuple[Network, tuple[str, ...]]:
     return read_network_with_notes(path)
+
+
+@functools.lru_cache(maxsize=16)
+def _content(network: Network) -> bytes:
+    return network.key()
 
 
 @functools.lru_cache(maxsize=16)

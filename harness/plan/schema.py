@@ -107,7 +107,7 @@ def read_plan(path: Path | str) -> Plan:
         reason = getattr(error, "strerror", None) or str(error)
         raise InputError(f"{path}: cannot be read: {reason}") from None
     try:
-        text = content.decode("utf-8")
+        text = content.decode("utf-8-sig")  # some editors put a byte order mark in front
     except UnicodeDecodeError as error:
         line = content.count(b"\n", 0, error.start) + 1
         raise InputError(f"{path.name}:{line}: is not UTF-8 text, as TOML must be") from None
@@ -158,13 +158,14 @@ def parse_plan(text: str, path: Path | None = None) -> Plan:
 
     conditions = expand(networks, data, seed, folder)
     rows = _read_rows(data)
-    own_limits = read_limits(limits)
-    learners = read_learners(top.content.get("learner", []), own_limits, folder, faults)
-    asked = _read_requirement(requirement)
-    margins = _read_gate(gate, learners) if "gate" in top.content else None
-
     data.refuse_unknown((ROWS.name, DATASETS.name))
+    own_limits = read_limits(limits)
     limits.refuse_unknown(LIMIT_KEYS)
+    before = len(faults.lines)
+    learners = read_learners(top.content.get("learner", []), own_limits, folder, faults)
+    labels = [learner.label for learner in learners] if len(faults.lines) == before else None
+    asked = _read_requirement(requirement)
+    margins = _read_gate(gate, labels) if "gate" in top.content else None
     _check_size(data, ROWS.name, rows, conditions)
     _check_size(requirement, "max_rows", (asked.max_rows,), conditions)
     faults.stop()
@@ -226,13 +227,13 @@ def _refuse_long_integers(place: str, value: Any, faults: Faults) -> None:
 def _read_rows(data: Section) -> tuple[int, ...]:
     if ROWS.name not in data.content:
         return DEFAULT_ROWS
-    rows: list[int] = []
+    rows: dict[int, None] = {}
     for position, item in data.items(ROWS.name):
         number = data.parse(ROWS, item, position=position)
         if number in rows:
             data.fault(ROWS.name, f"{number} stands twice; row counts must differ", position)
         elif number is not None:
-            rows.append(number)
+            rows[number] = None
     return tuple(sorted(rows))
 
 
@@ -284,7 +285,7 @@ def _number(text: str) -> float | None:
     return value if math.isfinite(value) else None
 
 
-def _read_gate(section: Section, learners: tuple[Learner, ...]) -> dict[str, Any]:
+def _read_gate(section: Section, labels: list[str] | None) -> dict[str, Any]:
     section.refuse_unknown(("margin", *(setting.name for setting in GATE)))
     gate = {
         setting.name: value
@@ -298,7 +299,6 @@ def _read_gate(section: Section, learners: tuple[Learner, ...]) -> dict[str, Any
             gate["margin"][measure] = margin.parse(Setting(measure, float, bounds=MARGIN), value)
         else:
             margin.fault(measure, unknown(f"measure {measure!r}", measure, sorted(MEASURES)))
-    labels = [learner.label for learner in learners]
-    if labels and "reference" in gate and gate["reference"] not in labels:
+    if labels is not None and "reference" in gate and gate["reference"] not in labels:
         section.fault("reference", unknown(f"label {gate['reference']!r}", gate["reference"], labels))
     return gate

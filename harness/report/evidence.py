@@ -47,7 +47,7 @@ class FigureFacts:
     title, description : str
     x_title, y_title : str
     curves : tuple of Curve
-        At most eight.
+        At most eight, with points or without.
     target : float or None
         Where to draw the line that the curves are to reach.
     is_proportion : bool
@@ -253,6 +253,7 @@ def measures_glossary(measures: Sequence[str]) -> Table:
         Column(key, title, is_number=False)
         for key, title in (
             ("label", "measure"),
+            ("name", "name in plans"),
             ("summary", "what it is"),
             ("unit", "unit"),
             ("better", "better"),
@@ -260,7 +261,7 @@ def measures_glossary(measures: Sequence[str]) -> Table:
         )
     )
     rows = tuple(
-        (measure_title(own.name), own.summary, own.unit, own.better, own.reference)
+        (measure_title(own.name), own.name, own.summary, own.unit, own.better, own.reference)
         for own in (MEASURES[measure] for measure in measures)
     )
     return Table("measures", "Measures", columns, rows)
@@ -371,9 +372,12 @@ def _figures(
     is_proportion: bool = False,
     x_title: str = "rows",
 ) -> list[FigureFacts]:
-    """Return one figure, or several where there are more learners than a figure can tell apart."""
-    drawn = [curve for curve in curves if curve.points]
-    parts = [drawn[start : start + MAX_SERIES] for start in range(0, len(drawn), MAX_SERIES)]
+    """Return one figure, or several where there are more learners than a figure can tell apart.
+
+    A learner without points keeps its place, so that each looks alike in all figures of a condition.
+    """
+    parts = [curves[start : start + MAX_SERIES] for start in range(0, len(curves), MAX_SERIES)]
+    parts = [part for part in parts if any(curve.points for curve in part)]
     figures = []
     for place, part in enumerate(parts):
         labels = {curve.label for curve in part}
@@ -434,8 +438,8 @@ def _wide(
 ) -> Table:
     places = sorted({place for own in values.values() for place in own})
     columns = (
-        Column("label", "learner", is_number=False),
-        *(Column(f"{x_title}_{place}", f"{place:,} {x_title}", decimals=decimals) for place in places),
+        Column("label", f"learner, by {x_title}", is_number=False),
+        *(Column(f"{x_title}_{place}", f"{place:,}", decimals=decimals) for place in places),
     )
     rows = tuple((label, *(own.get(place) for place in places)) for label, own in values.items())
     return Table(key, "", columns, rows, notes)

@@ -43,11 +43,11 @@ PAGE_COLOURS = {
     **{colour: f"var(--series-{place}, {colour})" for place, colour in enumerate(COLOURS[1:], start=2)},
 }
 LEAST_SECONDS = 1e-6  # nothing shorter has a place on a logarithmic axis
-SIZE = (7.2, 3.7)  # inches
+SIZE = (7.8, 3.7)  # inches
 FONT_SIZE = 9.0
 LABEL_GAP = 12.0  # points between two labels
-MAX_LABEL = 22  # characters
-AXES = (0.12, 0.13, 0.6, 0.83)  # left, bottom, width, height as shares; labels stand to the right
+MAX_LABEL = 34  # characters
+AXES = (0.1, 0.13, 0.56, 0.83)  # left, bottom, width, height as shares; labels stand to the right
 
 
 class _Style(NamedTuple):
@@ -175,6 +175,8 @@ def _scale(axes: Axes, figure: FigureFacts, all_series: Sequence[_Series]) -> No
         axes.set_ylim(-0.03, 1.03)
     else:
         axes.set_ylim(bottom=0)
+    axes.autoscale_view()
+    axes.set_autoscale_on(False)  # labels are placed by these limits
 
 
 def _apart(places: Sequence[float], least_ratio: float = 1.6) -> list[float]:
@@ -275,7 +277,7 @@ def _fit_for_page(svg: str, figure: FigureFacts, salt: str) -> str:
 
 
 def _fit_tag(tag: str) -> str:
-    tag = re.sub(r'(?<=<g) id="[^"]*"', "", tag)
+    tag = re.sub(r'(?<=<g) id="[^"]*"| transform="rotate\(-0 [^"]*"', "", tag)
     tag = re.sub(r' style="([^"]*)"', lambda match: _as_attributes(match[1]), tag)
     tag = tag.replace("xlink:href", "href")
     for colour, name in PAGE_COLOURS.items():

@@ -434,10 +434,10 @@ def test_graphs_without_extension_are_their_own_class(graph: Graph) -> None:
 def test_free_edges_point_from_earlier_to_later_variables() -> None:
     """Where several variables can be last, the last by position is: paths and cliques follow the order."""
     path = Graph.from_edges("abcd", undirected=[("a", "b"), ("b", "c"), ("c", "d")])
-    clique = Graph("abcd", ~np.eye(4, dtype=bool))
+    clique = Graph(tuple("abcd"), ~np.eye(4, dtype=bool))
 
     assert Graph.from_edges("abcd", [("a", "b"), ("b", "c"), ("c", "d")]) == consistent_extension(path)
-    assert Graph("abcd", np.triu(np.ones((4, 4), dtype=bool), 1)) == consistent_extension(clique)
+    assert Graph(tuple("abcd"), np.triu(np.ones((4, 4), dtype=bool), 1)) == consistent_extension(clique)
 
 
 def test_dag_is_its_own_extension(rng: np.random.Generator) -> None:

@@ -161,7 +161,7 @@ def test_frame_shows_states_as_categories() -> None:
 
 @given(datasets(), st.integers(0, 2**32))
 def test_a_masked_dataset_can_be_unmasked_by_hand(data: Dataset, seed: int) -> None:
-    """Column k of the view is column columns[k], every state replaced by its new number, missing by missing."""
+    """Column k of the view is column columns[k] with every state renumbered and missing cells kept."""
     view = View.draw(data.cardinalities.tolist(), np.random.default_rng(seed))
 
     masked = view.mask(data)
@@ -211,7 +211,7 @@ def test_a_view_leaks_no_name() -> None:
     masked = view.mask(small([[0, 2], [1, 1]]))
 
     assert masked.names == ("x1", "x2")
-    assert {own for own in masked.states} == {("0", "1"), ("0", "1", "2")}
+    assert set(masked.states) == {("0", "1"), ("0", "1", "2")}
 
 
 def test_every_view_is_equally_likely() -> None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import networkx as nx
 import numpy as np
 import pytest
@@ -64,7 +66,7 @@ def test_acyclicity_and_order_agree_with_networkx(graph: Graph) -> None:
         assert cycle[0] == cycle[-1]
         assert len(set(cycle)) == len(cycle) - 1
         position = {name: i for i, name in enumerate(graph.names)}
-        assert all(graph.directed[position[a], position[b]] for a, b in zip(cycle, cycle[1:]))
+        assert all(graph.directed[position[a], position[b]] for a, b in pairwise(cycle))
 
 
 @given(graphs())

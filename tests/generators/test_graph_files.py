@@ -123,7 +123,7 @@ class TestEveryFormat:
         """A file without any variable is refused."""
         parse, text = GRAPH_FORMATS[ending]
 
-        with pytest.raises(InputError, match="expected at least one (variable|node)"):
+        with pytest.raises(InputError, match=r"expected at least one (variable|node)"):
             parse(text(Graph.from_edges([])), "file")
 
 
@@ -207,7 +207,7 @@ class TestCsv:
 
 class TestGraphml:
     def test_any_reader_sees_the_arcs(self, mixed: Graph) -> None:
-        """networkx reads back the same arcs, an undirected edge as one in each direction."""
+        """Any reader of GraphML gets the same arcs, an undirected edge as one in each direction."""
         read = nx.parse_graphml(graphml_text(mixed))
 
         assert list(read.nodes) == list(mixed.names)
@@ -215,7 +215,7 @@ class TestGraphml:
 
     def test_kinds_as_attributes(self) -> None:
         """An edge attribute `kind` says which edges are undirected."""
-        drawn = nx.DiGraph()
+        drawn: nx.DiGraph[int] = nx.DiGraph()
         drawn.add_edge(1, 2, kind="directed")
         drawn.add_edge(2, 3, kind="undirected")
         drawn.add_edge(3, 4)

@@ -127,11 +127,10 @@ def test_what_is_no_network_is_refused(
 
 def test_all_faults_are_told_at_once() -> None:
     """A network with several faults gets one line for each."""
-    circle = Graph.from_edges("ab", [("a", "b")])
-    circle = Graph(circle.names, circle.arrow)
+    graph = Graph.from_edges("ab", [("a", "b")])
 
     with pytest.raises(InputError) as caught:
-        Network(circle, (("x", "x"), NO_YES), {"a": Cpt("a", (), np.array([0.5, 0.5]))})
+        Network(graph, (("x", "x"), NO_YES), {"a": Cpt("a", (), np.array([0.5, 0.5]))})
 
     assert len(caught.value.faults) == 2
     assert str(caught.value).splitlines() == list(caught.value.faults)

@@ -16,14 +16,16 @@ from harness.records import Bound, Condition, Learner, Limits, Requirement
 from harness.report.facts import StudyFacts
 from harness.scorers.registry import MEASURES
 
+REQUIREMENT = Requirement((Bound("skeleton_recall", ">=", 0.7), Bound("skeleton_precision", ">=", 0.8)), 0.8)
 
-@pytest.fixture
+
+@pytest.fixture(scope="session")
 def make_runs() -> Callable[..., Runs]:
-    """Give a function that makes `Runs` from one mapping per run, all columns but the given ones filled in."""
+    """Give a function that makes `Runs` from one mapping per run, and fills in what it does not name."""
     return runs_from
 
 
-@pytest.fixture
+@pytest.fixture(scope="session")
 def make_study() -> Callable[..., tuple[Runs, StudyFacts]]:
     """Give a function that makes up a whole study: its runs and its facts."""
     return study_from
@@ -59,9 +61,7 @@ def study_from(
     variables: tuple[int, ...] = (12,),
     n_networks: int = 30,
     n_datasets: int = 1,
-    requirement: Requirement | None = Requirement(
-        (Bound("skeleton_recall", ">=", 0.7), Bound("skeleton_precision", ">=", 0.8)), 0.8
-    ),
+    requirement: Requirement | None = REQUIREMENT,
     seed: int = 1,
     plan_text: str = 'title = "A study"\n',
     title: str = "Apiary winter-loss survey",
@@ -145,9 +145,7 @@ def study_from(
     return runs_from(filled, factors), facts
 
 
-def made_up_outcome(
-    rng: np.random.Generator, place: int, n_rows: int, p: int, luck: float
-) -> dict[str, Any]:
+def made_up_outcome(rng: np.random.Generator, place: int, n_rows: int, p: int, luck: float) -> dict[str, Any]:
     """Return the columns of one run; the later a learner, the better, and slower."""
     if place == 0:
         return {

@@ -307,7 +307,7 @@ def test_given_networks_come_from_files_beside_the_plan(folder: Path) -> None:
     ("paths", "expected"),
     [
         (("a/net.bif", "b/net.bif"), ["a/net", "b/net"]),
-        (("a/net.bif", "a/net.json"), ["a/net.bif", "a/net.json"]),
+        (("a/net.bif", "a/net.json"), ["net.bif", "net.json"]),
     ],
 )
 def test_files_of_one_stem_are_told_apart(folder: Path, paths: tuple[str, ...], expected: list[str]) -> None:
@@ -318,8 +318,7 @@ def test_files_of_one_stem_are_told_apart(folder: Path, paths: tuple[str, ...], 
 
     plan = parsed(folder, networks=f"file = {list(paths)}")
 
-    shown = [condition.factors["file"].removeprefix(f"{folder}/") for condition in plan.conditions]
-    assert shown == expected
+    assert [condition.factors["file"] for condition in plan.conditions] == expected
 
 
 def test_published_networks_are_named(folder: Path) -> None:
@@ -364,6 +363,13 @@ def test_plans_and_their_parts_can_be_sent_to_workers(folder: Path) -> None:
     plan = parse_plan(WHOLE, folder / "plan.toml")
 
     assert pickle.loads(pickle.dumps(plan)) == plan
+
+
+def test_a_byte_order_mark_is_no_fault(tmp_path: Path) -> None:
+    """Some editors put one in front of every text."""
+    (tmp_path / "plan.toml").write_bytes(b"\xef\xbb\xbf" + plan_of(top='title = "A"').encode())
+
+    assert read_plan(tmp_path / "plan.toml").title == "A"
 
 
 # The density of `chance`
@@ -610,8 +616,8 @@ WRONG_LEARNERS = {
     f"{MINE}fast = 1": ["learner[1].fast: must be true or false, got 1."],
     f"{MINE}alpa = 0.1": ["learner[1].alpa: unknown key. Did you mean 'alpha'?"],
     f"{MINE}command = ['x']": [
-        "learner[1].command: unknown key; accepted: method, source, label, vary, seconds, memory_mb, threads, "
-        "alpha, depth, fast, test."
+        "learner[1].command: unknown key; accepted: method, source, label, vary, seconds, memory_mb, "
+        "threads, alpha, depth, fast, test."
     ],
     f"{MINE}label = ''": ["learner[1].label: must be 1 to 80 printable characters, got ''."],
     f'{MINE}label = "a\\nb"': ["learner[1].label: must be 1 to 80 printable characters, got 'a\\nb'."],
@@ -704,6 +710,9 @@ WRONG_GATE = {
     "slower = 1": ["gate.slower: must be a number above 1, got 1."],
     "error = 1.5": ["gate.error: must be a number strictly between 0 and 1, got 1.5."],
     "reference = 'no-arc'": ["gate.reference: unknown label 'no-arc'. Did you mean 'no-arcs'?"],
+    "reference = 'A'\n[[learner]]\nmethod = 'pcc'": [
+        "learner[2].method: unknown method 'pcc'. Did you mean 'pc'?"
+    ],
     "marginn = {class_shd = 1}": ["gate.marginn: unknown key. Did you mean 'margin'?"],
 }
 WRONG = [
@@ -799,9 +808,9 @@ LEAVES = """\
 1 | -1 | 0.5 | '' | 'pc' | '2-3' | true | nan | inf | 1979-05-27 | '\\x' | 'a.py:b' | 'a.b:c'
 | 'class_shd <= 3' | '\U0001f41d' | "a\\nb" | "\\u0000" | "\\u0000.py:b" """
 KEYS = """\
-title seed networks data learner limits requirement gate variables topology cpts states mean_parents
-replicates file published rows datasets method source label vary alpha seconds memory_mb threads bounds assurance margin
-reference "\\n" """
+title seed networks data learner limits requirement gate variables topology cpts states
+mean_parents replicates file published rows datasets method source label vary alpha seconds memory_mb
+threads bounds assurance margin reference "\\n" """
 TABLES = st.sampled_from(["", "[networks]", "[data]", "[[learner]]", "[limits]", "[requirement]", "[gate]"])
 VALUES = st.recursive(
     st.sampled_from([*LEAVES.split("| "), "9" * 30, "0x" + "f" * 5000]),
@@ -852,7 +861,7 @@ def test_any_tables_are_read_or_refused(tables: list[tuple[str, dict[str, str]]]
 @given(st.data())
 def test_a_sound_plan_with_a_slip_is_read_or_refused(data: st.DataObject) -> None:
     """Cut, doubled or replaced text in a sound plan raises nothing but an input error."""
-    text = WHOLE.replace("my_learner.py:learn", "json:loads").replace("24", "5")
+    text = WHOLE.replace('source = "my_learner.py:learn"', 'method = "no-arcs"').replace("[12, 24]", "[4, 5]")
     start = data.draw(st.integers(0, len(text)))
     end = data.draw(st.integers(start, min(len(text), start + 30)))
     piece = data.draw(st.sampled_from(["", text[start:end] * 2, "x", "-", "[]", "{}", "''", "0", "."]))

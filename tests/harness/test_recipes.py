@@ -129,6 +129,16 @@ def test_keys_are_pinned() -> None:
     assert pinned == PINNED
 
 
+def test_no_topology_shares_the_name_of_a_setting_with_a_family() -> None:
+    """A condition has one flat table of keys: a name in it must mean one thing."""
+    sets = [
+        {name for entry in registry.values() for name in entry.settings}
+        for registry in (TOPOLOGIES, CPT_FAMILIES)
+    ]
+
+    assert set() == sets[0] & sets[1]
+
+
 def test_a_network_is_the_same_whenever_it_is_drawn() -> None:
     """Drawing has no memory: the same key gives the same network, another key another."""
     key, other = network_key(1, NETWORKS, 0), network_key(1, NETWORKS, 1)

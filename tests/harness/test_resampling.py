@@ -44,11 +44,11 @@ def test_datasets_of_a_network_stay_together(rng):
     estimate = mean_with_error(values, clusters)
 
     assert math.isclose(means.std(ddof=1) / 5, estimate.mcse, rel_tol=TOLERANCE)
-    assert (25, 100) == (estimate.n_clusters, estimate.n_values)
+    assert (estimate.n_clusters, estimate.n_values) == (25, 100)
 
 
 def test_unequal_networks_have_the_error_of_a_ratio(rng):
-    """With unequal networks the error agrees with the linearised one of a ratio (Cochran 1977, from memory)."""
+    """With unequal networks it agrees with the linearised error of a ratio (Cochran 1977, from memory)."""
     sizes = rng.integers(1, 6, size=200)
     clusters = np.repeat(np.arange(200), sizes)
     values = rng.normal(size=200)[clusters] + rng.normal(size=len(clusters))
@@ -71,7 +71,7 @@ def test_values_that_are_missing_are_left_out_column_by_column(rng):
     alone = mean_with_error(table[25:, 1], np.repeat(np.arange(20), 2)[25:])
     assert math.isclose(alone.value, estimates[1].value)
     assert math.isclose(alone.mcse, estimates[1].mcse)
-    assert (8, 15) == (estimates[1].n_clusters, estimates[1].n_values)
+    assert (estimates[1].n_clusters, estimates[1].n_values) == (8, 15)
     assert math.isnan(estimates[2].value)
     assert estimates[2].reason == "no run has a value"
 
@@ -90,7 +90,7 @@ def test_equal_values_have_no_error():
     """The error of equal values is exactly 0, whatever the rounding of their sums."""
     estimate = mean_with_error(np.full(30, 0.1), np.repeat(np.arange(10), 3))
 
-    assert (0.1, 0.0) == (estimate.value, estimate.mcse)
+    assert (estimate.value, estimate.mcse) == (0.1, 0.0)
 
 
 def test_the_same_runs_give_the_same_error():
