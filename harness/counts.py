@@ -272,7 +272,7 @@ def split_planes(columns: Columns, parents: NDArray[np.int64], child: int, space
                 _copy(planes[first + s], base[s])
                 sizes[s] = columns.plane_sizes[first + s]
         else:
-            _split_parts(base, n_parts, planes, first, r, 0, planes.shape[1])
+            _split_parts(base, n_parts, planes, first, r, np.int64(0), planes.shape[1])
             for c in range(n_parts * r):
                 sizes[c] = plane_size(base[c])
         if j < k:
@@ -302,7 +302,7 @@ def _split_parts(
     planes: NDArray[np.uint64],
     first: int,
     r: int,
-    start: int,
+    start: int | np.int64,
     end: int,
 ) -> None:
     # Splits each part by the states of one more variable, planes `first` to `first + r - 1`, in place:

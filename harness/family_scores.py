@@ -29,19 +29,17 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.special import gammaln, xlogy
 
-from generators.compiled import inlined, kernel, warm_up
-from generators.dataset import Dataset, code_dtype
+from generators.compiled import inlined
+from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
 from harness.counts import (
     Columns,
     Workspace,
     index_rows,
-    prepare,
     split_planes,
     tabulate_index,
     tabulate_occurring,
-    workspace,
 )
 
 Score = Literal["bic", "aic", "bdeu", "k2"]
@@ -268,10 +266,10 @@ def score_family(
     r = columns.cardinalities[child]
     n_parts = split_planes(columns, parents, child, space)
     if n_parts > 0:
-        return score_table(space.base_sizes, n_parts, r, 1, q, rule)
+        return score_table(space.base_sizes, n_parts, r, np.int64(1), q, rule)
     n_parts = index_rows(columns, parents, space)
     if tabulate_index(columns, child, n_parts, space):
-        return score_table(space.table, n_parts, r, 1, q, rule)
+        return score_table(space.table, n_parts, r, np.int64(1), q, rule)
     family = np.empty(parents.shape[0] + 1, dtype=np.int64)
     family[0] = child
     for j in range(parents.shape[0]):
@@ -281,7 +279,7 @@ def score_family(
 
 @inlined
 def score_table(
-    table: NDArray[np.uint32], n_parts: int, r: int, r_added: int, q: float, rule: Scoring
+    table: NDArray[np.uint32], n_parts: int, r: int, r_added: int | np.int64, q: float, rule: Scoring
 ) -> float:
     """Score a family, or a family with one more parent, from its table of counts.
 
@@ -402,38 +400,3 @@ def _log_gamma(x: float) -> float:
     z = y * y
     series = y * (1 / 12 - z * (1 / 360 - z * (1 / 1260 - z / 1680)))
     return (x - 0.5) * math.log(x) - x + 0.9189385332046727 + series  # log(2 pi) / 2
-
-
-@kernel
-def score_families(
-    columns: Columns, at: NDArray[np.int64], parents: NDArray[np.int64], rule: Scoring, space: Workspace
-) -> NDArray[np.float64]:
-    """Score the family of every variable.
-
-    Parameters
-    ----------
-    columns : Columns
-    at : int64 array, shape (p + 1,)
-    parents : int64 array, shape (at[p],)
-        Variable v has the parents ``parents[at[v] : at[v + 1]]``.
-    rule : Scoring
-    space : Workspace
-
-    Returns
-    -------
-    float64 array, shape (p,)
-    """
-    p = at.shape[0] - 1
-    scores = np.empty(p)
-    for v in range(p):
-        scores[v] = score_family(columns, parents[at[v] : at[v + 1]], v, rule, space)
-    return scores
-
-
-@warm_up
-def _compile() -> None:
-    for max_states in (2, 300):
-        states = tuple(tuple(str(s) for s in range(r)) for r in (2, max_states))
-        columns = prepare(Dataset(("a", "b"), states, np.zeros((2, 2), dtype=code_dtype(max_states))))
-        at, parents = np.array([0, 0, 1]), np.array([0])
-        score_families(columns, at, parents, scoring(columns, "bic"), workspace(columns))

@@ -23,6 +23,7 @@ critical value grows with the degrees of freedom, so few questions have a table 
 
 from __future__ import annotations
 
+import functools
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -184,7 +185,8 @@ def attainable_critical_values(
     n_given : int
         How many variables are conditioned on.
     ceiling : float
-        The greatest value of the statistic; larger critical values are left out.
+        The greatest value of the statistic; critical values above it are left out, as far as they exceed
+        the next power of 2.
 
     Returns
     -------
@@ -194,17 +196,22 @@ def attainable_critical_values(
     Examples
     --------
     >>> attainable_critical_values(0.05, np.array([2, 3]), 1, 20.0).df.tolist()
-    [2.0, 3.0, 4.0, 6.0, 8.0]
+    [2.0, 3.0, 4.0, 6.0, 8.0, 12.0]
     """
-    sizes = np.unique(cardinalities).astype(np.float64)
-    sizes = sizes[sizes > 1]
-    df = np.unique(np.multiply.outer(sizes - 1, sizes - 1))
-    for given in range(n_given + 1):
-        value = critical_values(alpha, df)
-        df = df[value < ceiling]
-        if given < n_given:
-            df = np.unique(np.multiply.outer(df, sizes))
-    return CriticalValues(df, critical_values(alpha, df))
+    sizes = tuple(np.unique(cardinalities[cardinalities > 1]).tolist())
+    # Rounded up, so that datasets of about the same size share what is kept.
+    return _attainable(alpha, sizes, n_given, 2.0 ** math.ceil(math.log2(max(ceiling, 1.0))))
+
+
+@functools.lru_cache(maxsize=256)
+def _attainable(alpha: float, sizes: tuple[int, ...], n_given: int, ceiling: float) -> CriticalValues:
+    states = np.array(sizes, dtype=np.float64)
+    if n_given == 0:
+        df = np.unique(np.multiply.outer(states - 1, states - 1))
+    else:
+        df = np.unique(np.multiply.outer(_attainable(alpha, sizes, n_given - 1, ceiling).df, states))
+    value = critical_values(alpha, df)
+    return CriticalValues(df[value < ceiling], value[value < ceiling])
 
 
 def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:

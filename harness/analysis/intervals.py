@@ -12,8 +12,8 @@ from numpy.typing import ArrayLike, NDArray
 from harness.analysis.resampling import mean_with_error
 from harness.records import Interval
 
-METHOD = "Wilson"
-CLUSTERED_METHOD = "Wilson at the effective number of runs"
+METHOD = "Wilson's score interval"
+CLUSTERED_METHOD = "Wilson's score interval at the effective number of runs"
 
 
 def wilson(share: float, n: float, confidence: float = 0.95, method: str = METHOD) -> Interval:

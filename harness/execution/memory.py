@@ -1,4 +1,4 @@
-"""How much memory a process, or a group of processes, holds; and the peak of one call.
+"""How much memory some processes hold, and the peak of one call.
 
 `ru_maxrss` of a forked child reports its parent's size, so on Linux the peak is VmHWM of
 /proc/self/status, set back before the call by writing 5 to /proc/self/clear_refs (man 5 proc).
@@ -10,12 +10,11 @@ import contextlib
 import os
 import resource
 import sys
-from pathlib import Path
+from collections.abc import Iterable
 
 MEBIBYTE = 1 << 20
 _PAGE = os.sysconf("SC_PAGE_SIZE")
 _IS_LINUX = sys.platform.startswith("linux")
-_SESSION_FIELD = 5 - 2  # of /proc/PID/stat, counted behind the command's closing bracket
 
 
 def reset_peak() -> None:
@@ -28,48 +27,26 @@ def reset_peak() -> None:
 def peak_mb() -> float:
     """Return the most that this process has held since `reset_peak`, in units of 2^20 bytes."""
     if _IS_LINUX:
-        with contextlib.suppress(OSError), open("/proc/self/status") as file:
+        with contextlib.suppress(OSError), open("/proc/self/status", "rb") as file:
             for line in file:
-                if line.startswith("VmHWM:"):
+                if line.startswith(b"VmHWM:"):
                     return int(line.split()[1]) / 1024
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     return peak / MEBIBYTE if sys.platform == "darwin" else peak / 1024
 
 
-def session_members(session: int) -> list[int]:
-    """Return the processes of a session, wherever their parents have gone."""
-    if not _IS_LINUX:
-        import psutil
-
-        return [pid for pid in psutil.pids() if _session_of(pid) == session]
-    members = []
-    for entry in os.listdir("/proc"):
-        if entry.isdecimal():
-            with contextlib.suppress(OSError, ValueError, IndexError):
-                stat = Path("/proc", entry, "stat").read_bytes()
-                if int(stat.rpartition(b")")[2].split()[_SESSION_FIELD]) == session:
-                    members.append(int(entry))
-    return members
-
-
-def resident_mb(processes: list[int]) -> float:
+def resident_mb(processes: Iterable[int]) -> float:
     """Return what some processes hold together; pages that they share count for each."""
     return sum(_resident_bytes(pid) for pid in processes) / MEBIBYTE
 
 
 def _resident_bytes(pid: int) -> int:
     if _IS_LINUX:
-        with contextlib.suppress(OSError, ValueError, IndexError):
-            return int(Path(f"/proc/{pid}/statm").read_bytes().split()[1]) * _PAGE
+        with contextlib.suppress(OSError, ValueError, IndexError), open(f"/proc/{pid}/statm", "rb") as file:
+            return int(file.read().split()[1]) * _PAGE
         return 0
     import psutil
 
     with contextlib.suppress(psutil.Error):
         return int(psutil.Process(pid).memory_info().rss)
     return 0
-
-
-def _session_of(pid: int) -> int | None:
-    with contextlib.suppress(OSError):
-        return os.getsid(pid)
-    return None

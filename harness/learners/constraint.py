@@ -43,7 +43,6 @@ from harness.independence import (
 )
 from harness.learners.specification import learner
 
-
 DECIMALS = 6  # to which statistics are compared when they are ordered
 MIN_SHARING = 3  # sets that must share a bound for it to be worth its cost; measured
 

@@ -23,7 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from generators.compiled import inlined, kernel, warm_up
-from generators.dataset import Dataset, code_dtype
+from generators.dataset import Dataset
 from generators.graph import Graph
 from generators.settings import Between
 from generators.topologies.random_order import draw_along_random_order
@@ -132,13 +132,16 @@ def hill_climbing(
     width = tie_width(data.n_rows)
     cap = max(1, min(max_parents, p - 1))
 
-    alone = _score_pairs(columns, rule, score in SCORE_EQUIVALENT, space)
-    start = np.zeros((p, p), dtype=np.bool_)
-    best, best_score = _climb(columns, rule, cap, width, start, alone, space)
-    for _ in range(restarts):
-        mean_parents = min(START_MEAN_PARENTS, (p - 1) / 2)
-        start = draw_along_random_order(p, mean_parents=mean_parents, max_parents=max_parents, rng=rng)
-        found, reached = _climb(columns, rule, cap, width, start, alone, space)
+    alone = np.empty((p, p))
+    best, best_score = np.zeros((p, p), dtype=np.bool_), -np.inf
+    for search in range(restarts + 1):
+        start = np.zeros((p, p), dtype=np.bool_)
+        if search > 0:
+            mean_parents = min(START_MEAN_PARENTS, (p - 1) / 2)
+            start = draw_along_random_order(p, mean_parents=mean_parents, max_parents=cap, rng=rng)
+        found, reached = _climb(
+            columns, rule, score in SCORE_EQUIVALENT, cap, width, start, search == 0, alone, space
+        )
         if reached > best_score + width:
             best, best_score = found, reached
     return Graph(data.names, best)
@@ -198,37 +201,22 @@ class Search(NamedTuple):
 
 
 @kernel
-def _score_pairs(
-    columns: Columns, rule: Scoring, is_equivalent: bool, space: Workspace
-) -> NDArray[np.float64]:
-    # The gains of every variable's first parent, [y, x]; on the diagonal y's score without parents.
-    p = columns.codes.shape[0]
-    nothing = np.empty(0, dtype=np.int64)
-    is_parent = np.zeros(p, dtype=np.bool_)
-    gains = np.empty((p, p))
-    for y in range(p):
-        first = y + 1 if is_equivalent else 0
-        own = _score_additions(columns, rule, nothing, y, is_parent, first, gains[y], space)
-        if is_equivalent:
-            for x in range(first, p):
-                gains[x, y] = gains[y, x]
-        gains[y, y] = own
-    return gains
-
-
-@kernel
 def _climb(
     columns: Columns,
     rule: Scoring,
+    is_equivalent: bool,
     max_parents: int,
     width: float,
     start: NDArray[np.bool_],
+    is_first: bool,
     alone: NDArray[np.float64],
     space: Workspace,
 ) -> tuple[NDArray[np.bool_], float]:
-    # One search from the DAG `start`, [x, y] for x -> y; `alone` comes from `_score_pairs`. Returns the
-    # DAG that it ends in, and its score.
+    # One search from the DAG `start`, [x, y] for x -> y. Returns the DAG that it ends in, and its score.
+    # The first search fills `alone`, the others use it.
     p = start.shape[0]
+    if is_first:
+        _score_pairs(columns, rule, is_equivalent, alone, space)
     state = Search(
         np.zeros((p, p), dtype=np.bool_),
         np.empty((p, max_parents), dtype=np.int64),
@@ -268,8 +256,25 @@ def _climb(
         before = state.reaches.copy()
         _trace_paths(state)
         for v in range(p):
-            if v == x or v == y or (before[v] != state.reaches[v]).any():
+            if v in (x, y) or (before[v] != state.reaches[v]).any():
                 _find_best_addition(state, v)
+
+
+@inlined
+def _score_pairs(
+    columns: Columns, rule: Scoring, is_equivalent: bool, alone: NDArray[np.float64], space: Workspace
+) -> None:
+    # The gains of every variable's first parent, [y, x]; on the diagonal y's score without parents.
+    p = columns.codes.shape[0]
+    nothing = np.empty(0, dtype=np.int64)
+    is_parent = np.zeros(p, dtype=np.bool_)
+    for y in range(p):
+        first = y + 1 if is_equivalent else np.int64(0)
+        own = _score_additions(columns, rule, nothing, y, is_parent, first, alone[y], space)
+        if is_equivalent:
+            for x in range(first, p):
+                alone[x, y] = alone[y, x]
+        alone[y, y] = own
 
 
 @inlined
@@ -324,8 +329,8 @@ def _find_best_addition(state: Search, y: int) -> None:
 @inlined
 def _leads(state: Search, source: int, target: int) -> bool:
     # Whether a directed path leads from one variable to the other.
-    word = state.reaches[source, target // WORD_ROWS]
-    return ((word >> np.uint64(target % WORD_ROWS)) & np.uint64(1)) != 0
+    word = state.reaches[source, target // WORD_ROWS] >> np.uint64(target % WORD_ROWS)
+    return bool(word & np.uint64(1))
 
 
 @inlined
@@ -338,10 +343,10 @@ def _may_reverse(state: Search, x: int, y: int, max_parents: int) -> bool:
     # Reversing x -> y closes a cycle where another path leads from x to y, through another parent of y.
     if state.n_parents[x] == max_parents:
         return False
+    closes = False
     for z in state.parents[y, : state.n_parents[y]]:
-        if z != x and _leads(state, x, z):
-            return False
-    return True
+        closes |= z != x and _leads(state, x, z)
+    return not closes
 
 
 @inlined
@@ -416,7 +421,9 @@ def _score_changes(columns: Columns, rule: Scoring, y: int, state: Search, space
     k = state.n_parents[y]
     parents, gains = state.parents[y, :k], state.gains[y]
     if k < state.parents.shape[1]:
-        state.scores[y] = _score_additions(columns, rule, parents, y, state.is_parent[y], 0, gains, space)
+        state.scores[y] = _score_additions(
+            columns, rule, parents, y, state.is_parent[y], np.int64(0), gains, space
+        )
     else:
         state.scores[y] = score_family(columns, parents, y, rule, space)
         for x in range(gains.shape[0]):
@@ -436,7 +443,7 @@ def _score_additions(
     parents: NDArray[np.int64],
     y: int,
     is_parent: NDArray[np.bool_],
-    first: int,
+    first: int | np.int64,
     gains: NDArray[np.float64],
     space: Workspace,
 ) -> float:
@@ -479,7 +486,5 @@ def _score_additions(
 @warm_up
 def _compile() -> None:
     rng = np.random.default_rng(0)
-    for max_states in (2, 300):
-        states = tuple(tuple(str(s) for s in range(r)) for r in (2, max_states))
-        data = Dataset(("a", "b"), states, np.zeros((2, 2), dtype=code_dtype(max_states)))
-        hill_climbing(data, restarts=1, rng=rng)
+    data = Dataset(("a", "b"), (("0", "1"),) * 2, np.zeros((2, 2), dtype=np.uint8))
+    hill_climbing(data, restarts=1, rng=rng)

@@ -1,4 +1,4 @@
-"""The advisory lock that lets one process write to a ledger."""
+"""The advisory lock that lets one process write to a ledger, and what sort of place the ledger is in."""
 
 from __future__ import annotations
 
@@ -9,6 +9,12 @@ import socket
 from pathlib import Path
 
 from harness.records import MachineStop
+
+MOUNTS = Path("/proc/self/mounts")
+NETWORK_FILE_SYSTEMS = frozenset(
+    {"9p", "afs", "beegfs", "ceph", "cifs", "gfs2", "glusterfs", "gpfs", "lustre", "ncpfs", "nfs", "nfs4"}
+    | {"ocfs2", "orangefs", "panfs", "smb3", "smbfs", "sshfs", "virtiofs"}
+)
 
 
 class WriterLock:
@@ -24,7 +30,8 @@ class WriterLock:
     """
 
     def __init__(self, ledger: Path) -> None:
-        self._path = ledger.with_name(f".{ledger.name}.lock")
+        file = ledger.resolve()  # a ledger under two names has one lock
+        self._path = file.with_name(f".{file.name}.lock")
         while True:
             try:
                 self._file = os.open(self._path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
@@ -58,3 +65,25 @@ class WriterLock:
         # Removed while still held: whoever comes next makes a file of its own.
         self._path.unlink(missing_ok=True)
         os.close(self._file)
+
+
+def is_on_network(path: Path, mounts: Path = MOUNTS) -> bool:
+    """Whether a file lies on a file system that other machines may have mounted too.
+
+    Parameters
+    ----------
+    path : Path
+    mounts : Path
+        The table of mounted file systems (man 5 proc); without one, the answer is no.
+    """
+    file, best, kind = path.resolve(), Path("/"), ""
+    try:
+        lines = mounts.read_text(errors="replace").splitlines()
+    except OSError:
+        return False
+    for line in lines:
+        _, place, own_kind, *_ = line.split(" ")
+        point = Path(place.replace("\\040", " "))  # the only escape that is common in names
+        if file.is_relative_to(point) and len(point.parts) >= len(best.parts):
+            best, kind = point, own_kind
+    return kind.removeprefix("fuse.") in NETWORK_FILE_SYSTEMS

@@ -3,7 +3,8 @@
 The contract. A ledger is written by one process at a time (an advisory lock beside it says so) and read
 by any number. What `Ledger.commit` has returned from survives kill -9 of everything. A file that is not
 a ledger, is damaged, or was written by a newer version is refused before anything touches it. When the
-disk is full or the file is gone, `MachineStop` is raised; what was committed before still opens.
+disk is full or the file is gone, `MachineStop` is raised; what was committed before still opens (unless
+the file is gone).
 """
 
 from __future__ import annotations
@@ -23,7 +24,7 @@ from typing import Any
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.streams import canonical_json
-from harness.ledger.lock import WriterLock
+from harness.ledger.lock import WriterLock, is_on_network
 from harness.records import Learner, Limits, MachineStop, Outcome, Status
 
 APPLICATION_ID = 0x41524359
@@ -51,10 +52,9 @@ _MACHINE_CODES = {
     sqlite3.SQLITE_CANTOPEN,
     sqlite3.SQLITE_BUSY,
     sqlite3.SQLITE_LOCKED,
-    sqlite3.SQLITE_CORRUPT,
-    sqlite3.SQLITE_NOTADB,
     sqlite3.SQLITE_PERM,
 }
+_DAMAGE_CODES = {sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB}
 _HEADER_MAGIC = b"SQLite format 3\x00"
 _HEADER_BYTES = 100
 
@@ -122,6 +122,7 @@ class Ledger:
         self.path = path
         self._connection = connection
         self._lock = lock
+        self._file = _identity(path)
         self._ids: dict[tuple[str, Any], int] = {}
 
     @classmethod
@@ -135,12 +136,9 @@ class Ledger:
         """
         path = Path(path)
         _refuse_what_is_no_ledger(path)
-        # Where it may, a reader tidies up the log's files when it is the last to close.
-        may_write = os.access(path, os.W_OK) and os.access(path.parent, os.W_OK)
-        connection = _connect(path, "rw" if may_write else "ro")
+        connection = _connect_sound(path)
         with _naming(path):
             connection.execute("PRAGMA query_only = ON")
-            _refuse_damage(path, connection)
         return cls(path, connection, None)
 
     @classmethod
@@ -163,10 +161,10 @@ class Ledger:
         try:
             if not path.exists():
                 _create(path)
-            connection = _connect(path, "rw")
+            connection = _connect_sound(path)
             with _naming(path):
-                _refuse_damage(path, connection)
-                connection.execute("PRAGMA journal_mode = WAL")
+                # The shared memory of a write-ahead log is not shared over a network.
+                connection.execute(f"PRAGMA journal_mode = {'TRUNCATE' if is_on_network(path) else 'WAL'}")
                 connection.execute("PRAGMA synchronous = FULL")
                 connection.execute("PRAGMA foreign_keys = ON")
         except BaseException:
@@ -283,9 +281,32 @@ class Ledger:
         return self._ids["dataset", (key, distortions)]
 
     def store_run(
-        self, dataset: int, rows: int, learner: Learner, outcome: Outcome, *, session: int, asked_by: str
+        self,
+        dataset: int,
+        rows: int,
+        learner: Learner,
+        outcome: Outcome,
+        *,
+        session: int,
+        asked_by: str,
+        started: str | None = None,
     ) -> None:
-        """Store one outcome; an earlier one of the same run is moved to `attempt`."""
+        """Store one outcome; an earlier one of the same run is moved to `attempt`.
+
+        Parameters
+        ----------
+        dataset : int
+            From `store_material` or `dataset_id`.
+        rows : int
+        learner : Learner
+        outcome : Outcome
+        session : int
+            From `begin_session`.
+        asked_by : str
+            The command that asked for the run.
+        started : str, optional
+            As `now` gives it; by default the time of storing.
+        """
         limits = canonical_json({"seconds": learner.limits.seconds, "memory_mb": learner.limits.memory_mb})
         fields = {
             "status": str(outcome.status),
@@ -299,7 +320,7 @@ class Ledger:
             "threads": learner.limits.threads,
             "load": outcome.load,
             "session": session,
-            "started": now(),
+            "started": started or now(),
             "asked_by": asked_by,
         }
         with _naming(self.path):
@@ -331,9 +352,18 @@ class Ledger:
                 )
 
     def commit(self) -> None:
-        """Make everything stored so far durable."""
+        """Make everything stored so far durable.
+
+        Raises
+        ------
+        MachineStop
+            If the disk is full or fails, or the file is no longer where it was opened.
+        """
         with _naming(self.path):
             self._connection.commit()
+        # SQLite writes on into a file that was deleted or moved, and nobody would find it again.
+        if _identity(self.path) != self._file:
+            raise MachineStop(f"{self.path}: the ledger was deleted or moved while it was written")
 
     # Reading ---------------------------------------------------------------------------------------
 
@@ -493,18 +523,37 @@ def _refuse_what_is_no_ledger(path: Path) -> None:
         )
 
 
-def _refuse_damage(path: Path, connection: sqlite3.Connection) -> None:
-    try:
-        found = connection.execute("PRAGMA quick_check(1)").fetchone()[0]
-    except sqlite3.DatabaseError as error:
-        if error.sqlite_errorcode & 0xFF not in (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB):
+def _connect_sound(path: Path) -> sqlite3.Connection:
+    """Connect to a ledger, for writing where that is allowed, or refuse a damaged one as it is."""
+    file = path.resolve()
+    log = file.with_name(f"{file.name}-wal")
+    has_log = log.exists() and log.stat().st_size > 0
+    if has_log:
+        # A connection that may write would move the log into the damaged file when it is closed.
+        with contextlib.closing(_connect(path, "ro")) as connection:
+            _refuse_damage(path, connection)
+    # Where it may, a reader tidies up the log's files when it is the last to close. Where it may not, it
+    # could not make them either: without a log, nobody writes, and the file can be read as it is.
+    may_write = os.access(file, os.W_OK) and os.access(file.parent, os.W_OK)
+    connection = _connect(path, "rw" if may_write else "ro" if has_log else "ro&immutable=1")
+    if not has_log:
+        try:
+            _refuse_damage(path, connection)
+        except BaseException:
             connection.close()
             raise
-        found = str(error)
+    return connection
+
+
+def _refuse_damage(path: Path, connection: sqlite3.Connection) -> None:
+    with _naming(path):
+        found = str(connection.execute("PRAGMA quick_check(1)").fetchone()[0])
     if found != "ok":
-        connection.close()
-        first = str(found).splitlines()[0]
-        raise InputError(f"{path}: the ledger is damaged ({first}); it was left as it is")
+        raise InputError(_damage_message(path, found.splitlines()[-1]))
+
+
+def _damage_message(path: Path, what: object) -> str:
+    return f"{path}: the ledger is damaged ({what}); it was left as it is"
 
 
 def _create(path: Path) -> None:
@@ -527,18 +576,26 @@ def _connect(path: Path, mode: str) -> sqlite3.Connection:
         return sqlite3.connect(uri, uri=True, timeout=10.0)
 
 
+def _identity(path: Path) -> tuple[int, int] | None:
+    try:
+        facts = os.stat(path)
+    except OSError:
+        return None
+    return facts.st_dev, facts.st_ino
+
+
 @contextlib.contextmanager
 def _naming(path: Path) -> Iterator[None]:
-    """Turn what the machine does to the file into `MachineStop`, with the ledger's name."""
+    """Turn what the machine does to the file into `MachineStop`, and damage into `InputError`, with its name."""
     try:
         yield
+    except json.JSONDecodeError as error:
+        raise InputError(_damage_message(path, f"a field is no JSON: {error}")) from error
     except sqlite3.DatabaseError as error:
-        if (
-            error.sqlite_errorcode & 0xFF not in _MACHINE_CODES
-        ):  # the primary code; the rest would be bugs of ours
-            raise
-        raise MachineStop(
-            f"{path}: {error}. What was committed before is safe; run again to resume"
-        ) from error
-    except OSError as error:
-        raise MachineStop(f"{path}: {error.strerror or error}") from error
+        # The primary code; text that is not UTF-8 is found by Python, which gives none.
+        code = getattr(error, "sqlite_errorcode", -1) & 0xFF
+        if code in _DAMAGE_CODES or (code == 0xFF and isinstance(error, sqlite3.OperationalError)):
+            raise InputError(_damage_message(path, error)) from error
+        if code in _MACHINE_CODES:
+            raise MachineStop(f"{path}: {error}. What was committed before is safe; run again to resume") from error
+        raise  # a bug of ours

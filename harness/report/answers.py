@@ -12,6 +12,7 @@ from harness.analysis.runs import Runs
 from harness.records import Condition
 from harness.report import sentences
 from harness.report.evidence import (
+    MAX_DRAWN,
     FigureFacts,
     condition_figures,
     failures_table,
@@ -126,24 +127,20 @@ def build_answers(runs: Runs, facts: StudyFacts) -> Answers:
         for index, condition in enumerate(facts.conditions)
         if any(summary.cell.condition == index for summary in summaries)
     )
-    headings = {index: _heading(condition) or "all" for index, condition in enumerate(facts.conditions)}
-    where = {
-        index: f" ({headings[index]})" if len(facts.conditions) > 1 else "" for index in headings
-    }  # inside sentences
+    headings = {index: _heading(condition) for index, condition in enumerate(facts.conditions)}
+    where = {index: f" ({heading})" if heading else "" for index, heading in headings.items()}
     grid = [answer for condition in conditions for answer in condition.grid]
     left_out = [
         line
         for condition in conditions
-        if (line := sentences.left_out(condition.shares, condition.heading or "All conditions")) is not None
+        if (line := sentences.left_out(condition.shares, condition.heading)) is not None
     ]
     return Answers(
         facts.title,
         sentences.question(facts),
         _notices(facts, conditions, where),
         conditions,
-        (sentences.NO_SEARCH, sentences.requirement_counts())
-        if facts.requirement
-        else (sentences.IN_BRACKETS,),
+        _reading(facts),
         sentences.truth(facts.conditions),
         sentences.cautions(facts, grid, left_out, where),
         _not_run(facts, runs, summaries, headings),
@@ -190,16 +187,26 @@ def _condition(
         sentences.population(unit, n_units),
         lines,
         learners_table(
-            f"{prefix}-learners", f"Learners at {most:,} rows{place}", last, by_cell, by_rows=False
+            f"{prefix}-learners",
+            f"Learners at {most:,} rows{place}",
+            last,
+            by_cell,
+            confidence=facts.confidence,
+            by_rows=False,
         ),
         (
             learners_table(
-                f"{prefix}-rows", f"Learners at every row count{place}", by_rows, by_cell, by_rows=True
+                f"{prefix}-rows",
+                f"Learners at every row count{place}",
+                by_rows,
+                by_cell,
+                confidence=facts.confidence,
+                by_rows=True,
             ),
             measures_table(f"{prefix}-measures", f"Every measure{place}", by_rows),
             *([undefined] if undefined is not None else []),
         ),
-        condition_figures(prefix, heading, summaries, shares, facts),
+        condition_figures(prefix, heading, summaries, shares, facts) if index < MAX_DRAWN else (),
         tuple(shares),
         grid,
     )
@@ -226,7 +233,7 @@ def _notices(
             n_units = max(share.n_units for share in condition.shares)
             unit = "network" if condition.population == "networks" else "dataset"
             line = sentences.too_few(n_units, unit, facts.requirement)
-            said.append(f"{condition.heading}: {line}" if line and condition.heading else line)
+            said.append(sentences.in_condition(condition.heading, line) if line else None)
             said += [
                 sentences.baseline_meets(answer, where[condition.index])
                 for answer in condition.grid
@@ -237,6 +244,17 @@ def _notices(
     if facts.n_other_runs:
         said.append(sentences.other_runs(facts.n_other_runs))
     return tuple(line for line in said if line is not None)
+
+
+def _reading(facts: StudyFacts) -> tuple[str, ...]:
+    said = (
+        [sentences.IN_BRACKETS]
+        if facts.requirement is None
+        else [sentences.NO_SEARCH, sentences.requirement_counts()]
+    )
+    if len(facts.conditions) > MAX_DRAWN:
+        said.append(sentences.some_drawn(MAX_DRAWN, len(facts.conditions)))
+    return tuple(said)
 
 
 def _not_run(

@@ -4,17 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
-
-import pandas as pd
+from typing import TYPE_CHECKING
 
 from harness.analysis.assurance import MetShare
 from harness.analysis.curves import Curve, measure_curves, runtime_curves, share_curves
 from harness.analysis.means import Summary
-from harness.records import Requirement, Status
+from harness.records import Status
 from harness.report import sentences
 from harness.report.facts import StudyFacts
-from harness.report.tables import Column, Table, Value, count_of, decimals_for, on_one_line
+from harness.report.tables import Column, Table, Value, count_of, decimals_for, joined, on_one_line
 from harness.scorers.registry import MEASURES
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 HEADLINE = ("class_shd", "skeleton_recall", "skeleton_precision")
 DRAWN = ("skeleton_recall", "skeleton_precision", "class_shd")
@@ -31,6 +33,7 @@ TIME_LINES = (
     "the upper quartile. An open triangle stands for a median over the limit."
 )
 MAX_SERIES = 8
+MAX_DRAWN = 8  # conditions with figures of their own; a page has to stay readable and below 2 MB
 MAX_FAILURE_LINES = 40
 MAX_CAUSE = 160
 
@@ -87,6 +90,7 @@ def learners_table(
     summaries: Sequence[Summary],
     shares: Mapping[tuple[int, str], MetShare],
     *,
+    confidence: float,
     by_rows: bool,
 ) -> Table:
     """Return the plain table of learners: requirement, headline measures, failures, time.
@@ -98,6 +102,8 @@ def learners_table(
         Of one condition, in the order of the lines.
     shares : mapping of (rows, label) to MetShare
         Empty without a requirement.
+    confidence : float
+        Of the shares' intervals.
     by_rows : bool
         Whether lines of several row counts stand in the table, so that it needs a column of them.
     """
@@ -108,7 +114,9 @@ def learners_table(
     columns = [Column("rows", "rows")] if by_rows else []
     columns.append(Column("label", "learner", is_number=False))
     if shares:
-        columns.append(Column("met", "share meeting the requirement"))
+        columns.append(
+            Column("met", f"share meeting the requirement [{sentences.percent(confidence)} interval]")
+        )
     for measure in measures:
         columns.append(headline_column(measure))
         if measure == "skeleton_precision" and silent:
@@ -290,7 +298,7 @@ def condition_figures(
             f"is the assurance asked for, {facts.requirement.assurance:g}.",
             "share of runs",
             share_curves(shares),
-            _share_table(shares, facts.requirement),
+            _share_table(shares, level),
             target=facts.requirement.assurance,
             is_proportion=True,
         )
@@ -407,13 +415,12 @@ def _figures(
     return figures
 
 
-def _share_table(shares: Sequence[MetShare], requirement: Requirement) -> Table:
+def _share_table(shares: Sequence[MetShare], level: str) -> Table:
     values: dict[str, dict[int, Value]] = {}
     for share in shares:
         values.setdefault(share.cell.label, {})[share.cell.rows] = share.interval
-    level = sentences.percent(requirement.confidence)
-    note = f"In square brackets: the {level} interval (Wilson 1927)."
-    return _wide("", values, "rows", 2, (note,))
+    methods = joined(sorted({share.interval.method for share in shares if share.interval is not None}), "or")
+    return _wide("", values, "rows", 2, (f"In square brackets: the {level} interval ({methods}).",))
 
 
 def _mean_table(measure: str, summaries: Sequence[Summary]) -> Table:

@@ -170,7 +170,7 @@ def _scale(axes: Axes, figure: FigureFacts, all_series: Sequence[_Series]) -> No
         axes.set_xlim(places[0] / 2, places[0] * 2)
     if figure.kind == "time":
         axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.10g}"))
-        axes.yaxis.set_minor_formatter(FuncFormatter(lambda value, _: ""))
+        axes.yaxis.set_minor_locator(NullLocator())
     elif figure.is_proportion:
         axes.set_ylim(-0.03, 1.03)
     else:
@@ -279,6 +279,7 @@ def _fit_for_page(svg: str, figure: FigureFacts, salt: str) -> str:
 def _fit_tag(tag: str) -> str:
     tag = re.sub(r'(?<=<g) id="[^"]*"| transform="rotate\(-0 [^"]*"', "", tag)
     tag = re.sub(r' style="([^"]*)"', lambda match: _as_attributes(match[1]), tag)
+    tag = re.sub(r"\d+\.\d{3,}", lambda number: f"{float(number[0]):.2f}", tag)
     tag = tag.replace("xlink:href", "href")
     for colour, name in PAGE_COLOURS.items():
         tag = tag.replace(colour, name)

@@ -145,6 +145,19 @@ def population(unit: str, n_units: int) -> str:
     return f"For this network only: {plural(n_units, 'dataset')} drawn from it, the same for all learners."
 
 
+def some_drawn(n_drawn: int, n_conditions: int) -> str:
+    """Say that not every condition has figures."""
+    return (
+        f"Figures are drawn for the first {count_of(n_drawn, n_conditions)} conditions; every condition has "
+        "its tables."
+    )
+
+
+def in_condition(heading: str, sentence: str) -> str:
+    """Say a sentence of one condition; without a heading there is only one, and it is not named."""
+    return f"{heading}: {sentence}" if heading else sentence[0].upper() + sentence[1:]
+
+
 # --- notices ----------------------------------------------------------------------------------------------
 
 
@@ -231,10 +244,10 @@ def left_out(shares: Iterable[MetShare], heading: str) -> str | None:
     share = next((share for share in shares if share.n_left_out), None)
     if share is None:
         return None
-    return (
-        f"{heading}: {count_of(share.n_left_out, share.n_networks)} networks "
-        f"({fixed(share.share_left_out, 2)}) are left out for every learner alike, because their truth "
-        "leaves a bounded measure undefined."
+    return in_condition(
+        heading,
+        f"{count_of(share.n_left_out, share.n_networks)} networks ({fixed(share.share_left_out, 2)}) are left "
+        "out for every learner alike, because their truth leaves a bounded measure undefined.",
     )
 
 
@@ -357,7 +370,8 @@ def not_run(facts: StudyFacts, labels_seen: Iterable[str], n_interrupted: int) -
 
 def uneven(heading: str, least: int, most: int, unit: str) -> str:
     """Say that the cells of a condition do not rest on equally many networks."""
-    return (
-        f"{heading}: the figures rest on {least:,} to {plural(most, unit)}, as not all learners and row "
-        "counts have run on the same ones."
+    return in_condition(
+        heading,
+        f"the figures rest on {least:,} to {plural(most, unit)}, as not all learners and row counts have run "
+        "on the same ones.",
     )

@@ -330,6 +330,22 @@ def test_products_too_large_are_refused_before_they_are_made(monkeypatch: pytest
             ask()
 
 
+@given(st.integers(2, 12), st.integers(0, 2**32))
+def test_the_foretold_sizes_are_the_real_ones(p: int, seed: int) -> None:
+    """The cells by which a question is refused are those of the products that are then made."""
+    rng = np.random.default_rng(seed)
+    graph = generate_graph("random-order", variables=p, mean_parents=min(1.5, (p - 1) / 2), rng=rng)
+    network = generate_network(graph, states="2-3", rng=rng)
+    factors = inference._factors(network, range(p), {})
+
+    order, cells = inference._elimination_order(factors, network.cardinalities.tolist(), keep=[0])
+
+    steps, end = inference._eliminate(factors, order)
+    assert cells == [step.clique.table.size for step in steps]
+    assert sorted([0, *order]) == list(range(p))
+    assert end.scope == (0,)
+
+
 def test_what_is_not_asked_about_is_left_out() -> None:
     """The same network is easy as long as no effect is known: causes are then independent."""
     network = dense(30)
