@@ -339,16 +339,41 @@ def tabulate_planes(columns: Columns, variable: int, n_planes: int, space: Works
     r = columns.offsets[variable + 1] - first
     if r == 0:
         return False
-    table = space.table
+    count_within(columns.planes[first : first + r], space.base, space.base_sizes, n_planes, space.table)
+    return True
+
+
+@inlined
+def count_within(
+    planes: NDArray[np.uint64],
+    base: NDArray[np.uint64],
+    base_sizes: NDArray[np.uint32],
+    n_planes: int,
+    table: NDArray[np.uint32],
+) -> None:
+    """Do the work of `tabulate_planes`, without tuples of arrays: for the innermost loops.
+
+    A compiled function that is handed a tuple of arrays counts the references to each of them, which
+    costs as much as counting a few hundred rows.
+
+    Parameters
+    ----------
+    planes : uint64 array, shape (r, ceil(n / 64)), C-contiguous
+        Of the variable to count.
+    base, base_sizes, n_planes
+        As in `split_planes`, `tabulate_planes`.
+    table : uint32 array, shape (at least n_planes * r,)
+        Filled: cell ``c * r + s``.
+    """
+    r = planes.shape[0]
     _clear(table, n_planes * r)
     for s in range(r - 1):
-        _add_overlaps(space.base, n_planes, columns.planes[first + s], table[s:], r)
+        _add_overlaps(base, n_planes, planes[s], table[s:], r)
     for c in range(n_planes):
-        rest = space.base_sizes[c]
+        rest = base_sizes[c]
         for s in range(r - 1):
             rest -= table[c * r + s]
         table[c * r + r - 1] = rest
-    return True
 
 
 @inlined

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import shutil
 import socket
 import subprocess
 import sys
@@ -18,6 +19,7 @@ from typing import IO, Any
 
 from generators.errors import InputError
 from harness.execution.messages import Drawn, Ended, Event, Work
+from harness.execution.processes import end_marked
 from harness.records import Learner, MachineStop
 
 THREAD_VARIABLES = (
@@ -34,12 +36,14 @@ _START = """
 import sys
 sys.path.insert(0, sys.argv[1])
 from harness.execution.supervisor import main
-main(int(sys.argv[2]))
+main(int(sys.argv[2]), int(sys.argv[3]), sys.argv[4])
 """
 WORK_AHEAD = 2  # pieces of work per worker, so that none waits for the main process
 MAX_BATCH = 200  # events handed back at once: what one commit of the ledger holds
 LOOK_SECONDS = 0.2  # how soon a wish to stop is noticed
+END_SECONDS = 5.0  # for a supervisor to end its runners
 MAX_DEATHS = 5
+MARK = "ARCASSAY_WORKER"  # in the environment of all that a worker starts
 
 
 @dataclass(slots=True, eq=False)
@@ -49,6 +53,7 @@ class _Worker:
     process: subprocess.Popen[bytes]
     connection: Connection
     errors: IO[bytes]
+    folder: Path
     is_ready: bool = False
     is_over: bool = False
     open_work: dict[int, Work] = field(default_factory=dict)
@@ -80,19 +85,25 @@ class LocalEngine:
         self._is_stopping = False
         self._is_exhausted = False
         self._deaths = 0
+        self._was_ready = False
+        self._fault: InputError | None = None
+        self._folder = Path()
 
     def __enter__(self) -> LocalEngine:
+        try:
+            self._folder = Path(tempfile.mkdtemp(prefix="arcassay-"))
+        except OSError as error:
+            raise MachineStop(f"no folder for temporary files can be made ({error.strerror})") from error
         return self
 
     def __exit__(self, *_: object) -> None:
         for worker in self._workers:
             worker.connection.close()  # a supervisor that loses its main process ends its runners
+            if not worker.is_ready:
+                worker.process.kill()  # it has none yet, and may be compiling for a minute
         for worker in self._workers:
-            with contextlib.suppress(subprocess.TimeoutExpired):
-                worker.process.wait(timeout=5)
-            worker.process.kill()
-            worker.process.wait()
-            worker.errors.close()
+            _clear_away(worker)
+        shutil.rmtree(self._folder, ignore_errors=True)
 
     def stop(self) -> None:
         """Finish what is running, and nothing more."""
@@ -142,6 +153,8 @@ class LocalEngine:
                 if not told_to_stop:
                     self._hand_out(source)
             yield batch
+            if self._fault is not None:
+                raise self._fault
 
     def _hand_out(self, source: Iterator[Work]) -> None:
         for worker in self._workers:
@@ -158,7 +171,7 @@ class LocalEngine:
     def _read(self, worker: _Worker, on_ready: Callable[[], None] | None) -> list[Event]:
         try:
             message: Any = worker.connection.recv()
-        except (EOFError, ConnectionResetError):
+        except (EOFError, OSError):
             self._replace(worker)
             return []
         word, *rest = message
@@ -166,18 +179,19 @@ class LocalEngine:
             number, network, dataset = rest
             return [Drawn(worker.open_work[number], network, dataset)]
         if word == "ended":
-            number, position, outcome, overhead = rest
+            number, position, outcome, started, overhead = rest
             worker.ended[number].add(position)
             self._deaths = 0
             work = worker.open_work[number]
-            return [Ended(work, work.requests[position], outcome, overhead)]
+            return [Ended(work, work.requests[position], outcome, started, overhead)]
         self._note(worker, word, rest, on_ready)
         return []
 
     def _note(self, worker: _Worker, word: str, rest: list[Any], on_ready: Callable[[], None] | None) -> None:
         if word == "ready":
             worker.is_ready = True
-            if len(self._workers) == 1:
+            if not self._was_ready:
+                self._was_ready = True
                 # The first has compiled what there was to compile; the others find it in the cache.
                 if on_ready is not None:
                     on_ready()
@@ -188,7 +202,9 @@ class LocalEngine:
             worker.is_over = True
             worker.open_work.clear()
         elif word == "cannot-draw":
-            raise InputError(*rest[0].splitlines())
+            worker.is_over = True
+            worker.open_work.clear()
+            self._fault = InputError(*rest[0].splitlines())
 
     def _tell_to_stop(self) -> None:
         for worker in self._workers:
@@ -201,7 +217,6 @@ class LocalEngine:
 
     def _replace(self, worker: _Worker) -> None:
         """Start another supervisor for one that died, and have its unfinished work done again."""
-        worker.process.wait()
         worker.is_over = True
         self._deaths += 1
         if self._deaths > MAX_DEATHS:
@@ -217,17 +232,20 @@ class LocalEngine:
         worker.open_work.clear()
         self._workers.remove(worker)
         worker.connection.close()
-        worker.errors.close()
+        _clear_away(worker)
         if not self._is_stopping:
             self._workers.append(self._start())
 
     def _start(self) -> _Worker:
         ours, theirs = socket.socketpair()
-        errors = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the worker lives
-        environment = {**os.environ, **dict.fromkeys(THREAD_VARIABLES, str(self._threads))}
+        arguments = [str(_ROOT), str(theirs.fileno()), str(os.getpid())]
         try:
+            errors = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the worker lives
+            folder = Path(tempfile.mkdtemp(dir=self._folder))
+            threads = dict.fromkeys(THREAD_VARIABLES, str(self._threads))
+            environment = {**os.environ, **threads, MARK: str(folder)}
             process = subprocess.Popen(
-                [sys.executable, "-P", "-c", _START, str(_ROOT), str(theirs.fileno())],
+                [sys.executable, "-P", "-c", _START, *arguments, str(folder)],
                 stdin=subprocess.DEVNULL,
                 stdout=errors,
                 stderr=errors,
@@ -240,5 +258,18 @@ class LocalEngine:
         finally:
             theirs.close()
         connection = Connection(ours.detach())
-        connection.send(self._learners)
-        return _Worker(process, connection, errors)
+        # Where this process finds a learner's module, so must that one.
+        path = [os.path.abspath(place) for place in sys.path if os.path.exists(place or os.curdir)]
+        connection.send((self._learners, path))
+        return _Worker(process, connection, errors, folder)
+
+
+def _clear_away(worker: _Worker) -> None:
+    """See a supervisor end, and end what it leaves if it could not do so itself."""
+    with contextlib.suppress(subprocess.TimeoutExpired):
+        worker.process.wait(timeout=END_SECONDS)
+    worker.process.kill()
+    if worker.process.wait() != 0:
+        end_marked(f"{MARK}={worker.folder}")
+        shutil.rmtree(worker.folder, ignore_errors=True)
+    worker.errors.close()

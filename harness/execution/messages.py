@@ -55,6 +55,7 @@ class Ended:
     work: Work
     request: Request
     outcome: Outcome
+    started: str  # UTC, ISO 8601
     overhead_seconds: float  # wall time since the run before, less the learner's own
 
 

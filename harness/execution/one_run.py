@@ -129,7 +129,7 @@ def scored(material: Material, learner: Learner, timed: Timed) -> Outcome:
 
 def failed(error: BaseException) -> Outcome:
     """Say what became of a run whose learner raised `error`."""
-    text = str(error).strip() or type(error).__name__
+    text = _plain(_text_of(error)) or type(error).__name__
     if isinstance(error, Declined):
         return Outcome(Status.DECLINED, text)
     if isinstance(error, InvalidAnswer):
@@ -137,10 +137,21 @@ def failed(error: BaseException) -> Outcome:
     if isinstance(error, MemoryError):
         return Outcome(Status.OUT_OF_MEMORY, text)
     if isinstance(error, SystemExit):
-        return Outcome(Status.CRASHED, f"the learner ended the process (exit code {error.code})")
-    first = traceback.format_exception_only(error)[-1].strip()
-    trace = "".join(traceback.format_exception(error))
-    return Outcome(Status.ERROR, f"{first}\n{trace}"[:MAX_CAUSE_CHARACTERS])
+        return Outcome(Status.CRASHED, f"the learner ended the process (exit code {text})")
+    trace = _plain("".join(traceback.format_exception(error))[-MAX_CAUSE_CHARACTERS:])
+    return Outcome(Status.ERROR, f"{type(error).__name__}: {text.splitlines()[0]}\n{trace}")
+
+
+def _text_of(error: BaseException) -> str:
+    try:
+        return str(error)
+    except Exception:  # a stranger's class
+        return ""
+
+
+def _plain(text: str) -> str:
+    """Shorten a stranger's text, and leave out what a file of UTF-8 text cannot hold."""
+    return text[:MAX_CAUSE_CHARACTERS].encode("utf-8", "replace").decode().replace("\0", "?").strip()
 
 
 def _rng_source(dataset_key: bytes, rows: int) -> Callable[[], np.random.Generator]:

@@ -6,6 +6,7 @@ within a dataset from few rows to many, and there in the plan's order of learner
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 
@@ -16,6 +17,10 @@ from harness.plan.expansion import settings_for
 from harness.plan.recipes import dataset_key
 from harness.plan.schema import Plan
 from harness.records import Learner, Status
+
+# Of one piece of work: what is handed out must fit into a socket's buffer, or the main process could wait
+# for a supervisor that waits for the main process.
+MAX_REQUESTS = 500
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,20 +54,25 @@ def slots(plan: Plan, network_keys: Mapping[int, list[bytes]]) -> Iterator[Datas
 def missing_work(
     plan: Plan, network_keys: Mapping[int, list[bytes]], known: Mapping[RunKey, KnownRun]
 ) -> Iterator[Work]:
-    """Yield what is to be run, one piece of work per dataset that lacks any run."""
-    number = 0
+    """Yield what is to be run: a piece of work per dataset that lacks any run, more if it lacks many."""
+    numbers = itertools.count()
+    distortions = [canonical_json(condition.data) for condition in plan.conditions]
+    settings = [
+        [settings_for(learner, condition) for learner in plan.learners] for condition in plan.conditions
+    ]
     for slot in slots(plan, network_keys):
         condition = plan.conditions[slot.condition]
-        distortions = canonical_json(condition.data)
-        requests = tuple(
-            Request(position, rows, settings_for(learner, condition))
+        lacking = (
+            Request(position, rows, settings[slot.condition][position])
             for rows in plan.rows
             for position, learner in enumerate(plan.learners)
-            if is_missing(known.get(RunKey(slot.dataset_key, distortions, rows, learner.key)), learner)
+            if is_missing(
+                known.get(RunKey(slot.dataset_key, distortions[slot.condition], rows, learner.key)), learner
+            )
         )
-        if requests:
+        while requests := tuple(itertools.islice(lacking, MAX_REQUESTS)):
             yield Work(
-                number,
+                next(numbers),
                 slot.condition,
                 dict(condition.networks),
                 dict(condition.data),
@@ -72,7 +82,6 @@ def missing_work(
                 slot.index,
                 requests,
             )
-            number += 1
 
 
 def is_missing(known: KnownRun | None, learner: Learner) -> bool:

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import time
 from collections import Counter
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
 from harness.execution.messages import Ended, Request, Work
 from harness.records import Status
 
 Cell = tuple[int, int, int]  # condition, rows, learner
+Place = tuple[int, int]  # condition, learner
+ANYWHERE = -1  # stands for all conditions together
 
 
 @dataclass(slots=True)
@@ -22,10 +24,13 @@ class Progress:
     n_workers : int
     left : Counter of Cell
         Runs still to be done.
+    total : int
+        All runs of this start, done or left.
     """
 
     n_workers: int
     left: Counter[Cell]
+    total: int
     done: int = 0
     statuses: Counter[Status] = field(default_factory=Counter)
     _seconds: dict[Cell, float] = field(default_factory=dict)
@@ -36,17 +41,12 @@ class Progress:
     def of(cls, works: Iterable[Work], n_workers: int) -> Progress:
         """Count the runs of some work."""
         left = Counter(_cell(work, request) for work in works for request in work.requests)
-        return cls(n_workers, left)
+        return cls(n_workers, left, left.total())
 
     @property
-    def total(self) -> int:
-        """All runs of this start, done or left."""
-        return self.done + self.left.total()
-
-    @property
-    def measured(self) -> frozenset[Cell]:
-        """The cells of which at least one run has ended."""
-        return frozenset(self._counts)
+    def n_measured(self) -> int:
+        """The number of cells of which at least one run has ended."""
+        return sum(condition != ANYWHERE for condition, _, _ in self._counts)
 
     @property
     def elapsed_seconds(self) -> float:
@@ -64,33 +64,37 @@ class Progress:
         self.left[cell] -= 1
         self.done += 1
         self.statuses[event.outcome.status] += 1
-        self._counts[cell] += 1
         seconds = (event.outcome.wall_seconds or 0.0) + max(0.0, event.overhead_seconds)
-        self._seconds[cell] = self._seconds.get(cell, 0.0) + seconds
+        for place in (cell, (ANYWHERE, *cell[1:])):
+            self._counts[place] += 1
+            self._seconds[place] = self._seconds.get(place, 0.0) + seconds
 
     def seconds_left(self) -> float | None:
-        """Return the wall time that the rest takes, or None while nothing has been measured.
+        """Return the wall time that the rest takes, or None while nothing has been measured."""
+        return self.seconds_for(self.left)
 
-        Each run left costs the mean of its cell so far; a cell not yet measured costs what the same
-        learner cost at the nearest row count measured, in proportion to the rows, else the mean of all.
+    def seconds_for(self, runs: Mapping[Cell, int]) -> float | None:
+        """Return the wall time that some runs take, or None while nothing has been measured.
+
+        Each run costs the mean of its cell so far. A cell not yet measured costs what the same learner
+        cost in the same condition at the nearest row count measured, or in all conditions together if
+        there is none, more in proportion to the rows; a learner not yet measured costs the mean of all.
         """
-        if not self._counts:
+        if not self.done:
             return None
-        overall = sum(self._seconds.values()) / self._counts.total()
-        total = sum(n * self._cost(cell, overall) for cell, n in self.left.items() if n > 0)
-        return total / self.n_workers
+        measured: dict[Place, list[int]] = {}
+        for condition, rows, learner in self._counts:
+            measured.setdefault((condition, learner), []).append(rows)
+        return sum(n * self._cost(cell, measured) for cell, n in runs.items() if n > 0) / self.n_workers
 
-    def _cost(self, cell: Cell, overall: float) -> float:
-        if self._counts[cell]:
-            return self._seconds[cell] / self._counts[cell]
+    def _cost(self, cell: Cell, measured: Mapping[Place, list[int]]) -> float:
         condition, rows, learner = cell
-        same = [c for c in self._counts if c[0] == condition and c[2] == learner] or [
-            c for c in self._counts if c[2] == learner
-        ]
-        if not same:
-            return overall
-        nearest = min(same, key=lambda c: abs(c[1] - rows))
-        return self._seconds[nearest] / self._counts[nearest] * max(1.0, rows / nearest[1])
+        for place in (condition, ANYWHERE):
+            if own := measured.get((place, learner)):
+                nearest = min(own, key=lambda other: (abs(other - rows), other))
+                found = (place, nearest, learner)
+                return self._seconds[found] / self._counts[found] * max(1.0, rows / nearest)
+        return sum(self._seconds[found] for found in self._seconds if found[0] == ANYWHERE) / self.done
 
 
 def _cell(work: Work, request: Request) -> Cell:

@@ -6,13 +6,13 @@ back as JSON, since in a one-run process a stranger's code shares the memory.
 
 from __future__ import annotations
 
-import ctypes
-import gc
+import contextlib
 import json
 import os
 import resource
 import signal
 import sys
+import traceback
 from collections.abc import Callable, Mapping
 from multiprocessing.connection import Connection
 from pathlib import Path
@@ -24,13 +24,14 @@ from generators.streams import canonical_json
 from harness.execution.memory import MEBIBYTE
 from harness.execution.messages import Work
 from harness.execution.one_run import Material, MaterialSource, Timed, failed, scored, timed_call
+from harness.execution.processes import die_with_parent
 from harness.learners.sources import folder_of, load, own_folder
 from harness.learners.specification import Specification
 from harness.ledger.store import graph_text
 from harness.records import Learner, Outcome, Status
 
 _CONNECTION_FILE = 3
-_SET_PARENT_DEATH_SIGNAL = 1  # PR_SET_PDEATHSIG of <sys/prctl.h>
+_MANY_FILES = 1 << 16  # where their number is not limited
 ADDRESS_SPACE_SLACK_MB = 8192  # address space is not memory: numba and the BLAS reserve gigabytes
 
 
@@ -55,7 +56,7 @@ def fork_runner(main: Callable[[Connection], None], connection: Connection, outp
     code = 1
     try:
         os.setsid()
-        _die_with_parent(parent)
+        die_with_parent(parent)
         signal.signal(signal.SIGTERM, signal.SIG_DFL)
         signal.signal(signal.SIGINT, signal.SIG_IGN)
         os.chdir(folder)
@@ -65,10 +66,13 @@ def fork_runner(main: Callable[[Connection], None], connection: Connection, outp
     except (EOFError, BrokenPipeError, ConnectionResetError):
         code = 0  # the supervisor is gone, and so is the reason to be
     except BaseException:
-        sys.excepthook(*sys.exc_info())
+        with contextlib.suppress(BaseException):
+            traceback.print_exc()
     finally:
-        sys.stdout.flush()
-        sys.stderr.flush()
+        # Whatever a learner has made of the streams: nothing may return from here into the supervisor.
+        for stream in (sys.stdout, sys.stderr):
+            with contextlib.suppress(BaseException):
+                stream.flush()
         os._exit(code)
     raise AssertionError("not reached")
 
@@ -79,7 +83,6 @@ def serve_many(
     """Return the main function of a runner that takes run after run of built-in learners."""
 
     def main(connection: Connection) -> None:
-        gc.freeze()
         source = MaterialSource()
         material: Material | None = None
         while True:
@@ -109,9 +112,14 @@ def serve_one(learner: Learner, work: Work, position: int) -> Callable[[Connecti
     """Return the main function of a runner that calls somebody's learner once."""
 
     def main(connection: Connection) -> None:
-        material = MaterialSource().draw(work)
+        try:
+            material = MaterialSource().draw(work)
+        except InputError as error:
+            _send(connection, event="cannot-draw", message=str(error))
+            return
         _bound_address_space(learner.limits.memory_mb)
         try:
+            _send(connection, event="loading")
             with own_folder(folder_of(learner)):
                 specification = load(learner)
                 _send(connection, event="calling")
@@ -198,21 +206,15 @@ def _send(connection: Connection, **fields: Any) -> None:
     connection.send_bytes(canonical_json(fields).encode("ascii"))
 
 
-def _die_with_parent(parent: int) -> None:
-    if sys.platform.startswith("linux"):
-        ctypes.CDLL(None, use_errno=True).prctl(_SET_PARENT_DEATH_SIGNAL, signal.SIGKILL)
-        if os.getppid() != parent:  # it died between the fork and this line
-            os._exit(1)
-
-
 def _keep_only(connection: int, output: int) -> None:
     # The supervisor's other files must not stay open here: their ends would never be seen to close.
     nothing = os.open(os.devnull, os.O_RDONLY)
     os.dup2(nothing, 0)
     os.dup2(output, 1)
     os.dup2(output, 2)
-    os.dup2(connection, _CONNECTION_FILE)
-    os.closerange(_CONNECTION_FILE + 1, resource.getrlimit(resource.RLIMIT_NOFILE)[0])
+    os.dup2(connection, _CONNECTION_FILE, inheritable=False)
+    limit = resource.getrlimit(resource.RLIMIT_NOFILE)[0]
+    os.closerange(_CONNECTION_FILE + 1, limit if limit > 0 else _MANY_FILES)
 
 
 def _bound_address_space(memory_mb: int) -> None:

@@ -9,7 +9,8 @@ whatever a learner leaves behind, and ends it.
 from __future__ import annotations
 
 import contextlib
-import ctypes
+import gc
+import importlib
 import json
 import os
 import shutil
@@ -18,26 +19,30 @@ import sys
 import tempfile
 import time
 from collections import deque
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from multiprocessing.connection import Connection, Pipe, wait
 from pathlib import Path
+from types import FrameType
 from typing import Any
 
 from generators import compiled
 from generators.graph import Graph
-from harness.execution import memory
+from harness.execution import memory, processes
 from harness.execution.messages import Work
 from harness.execution.runner import fork_runner, outcome_from, serve_many, serve_one
 from harness.learners.builtin import built_in
 from harness.learners.sources import needs_isolation
-from harness.ledger.store import DrawnDataset, DrawnNetwork
+from harness.ledger.store import DrawnDataset, DrawnNetwork, now
 from harness.records import Learner, Outcome, Status
 
 POLL_SECONDS = 0.03  # how often a running learner's memory is looked at
 GRACE_SECONDS = 0.2  # between the request to end and the end
+LOADING_SECONDS = 120.0  # for importing somebody's learner, which its own limit does not cover
 MAX_OUTPUT_BYTES = 16 << 20
+MAX_ANSWER_BYTES = 1 << 30
 TAIL_BYTES = 2000
-_SET_CHILD_SUBREAPER = 36  # PR_SET_CHILD_SUBREAPER of <sys/prctl.h>
+# What reads a learner's answer: imported before the fork, not within the time of the first call.
+_PRELOADED = ("networkx", "pandas")
 
 
 class _MainIsGone(Exception):
@@ -59,6 +64,19 @@ class _Runner:
     drawn: int | None = None  # the number of the work whose material it holds
     ended: bool = field(default=False)
 
+    def ask(self, *command: Any) -> None:
+        """Send a command; that it is gone is noticed where its answer is awaited."""
+        with contextlib.suppress(BrokenPipeError, ConnectionResetError):
+            self.connection.send(command)
+
+    def answer(self) -> dict[str, Any] | None:
+        """Return what it says, or None if that is nothing of ours, or the end."""
+        try:
+            answer = json.loads(self.connection.recv_bytes(MAX_ANSWER_BYTES))
+        except (EOFError, OSError, ValueError):
+            return None
+        return answer if isinstance(answer, dict) and "event" in answer else None
+
 
 class Supervisor:
     """Take work from the main process, have it run, and report every event.
@@ -69,20 +87,27 @@ class Supervisor:
         To the main process.
     learners : tuple of Learner
         All of the plan, in its order.
+    folder : Path
+        Where runners get their working folders; it goes with the supervisor.
     """
 
-    def __init__(self, main: Connection, learners: tuple[Learner, ...]) -> None:
+    def __init__(self, main: Connection, learners: tuple[Learner, ...], folder: Path) -> None:
         self._main = main
         self._learners = learners
+        self._folder = folder
         self._queue: deque[Work] = deque()
         self._stopping = False
         self._steady: _Runner | None = None
         self._last_event = time.monotonic()
         # Imported here, once: runners are forked with everything loaded and compiled.
+        for name in _PRELOADED:
+            importlib.import_module(name)
         self._specifications = {
             i: built_in(learner.method) for i, learner in enumerate(learners) if not needs_isolation(learner)
         }
-        compiled.warm_all()
+        _warm_up()
+        gc.collect()
+        gc.freeze()  # a runner's collections would copy every page of this
 
     def serve(self) -> None:
         """Work until the main process asks to stop or is gone."""
@@ -105,11 +130,14 @@ class Supervisor:
         finally:
             if self._steady is not None:
                 self._end(self._steady)
+            shutil.rmtree(self._folder, ignore_errors=True)
+            with contextlib.suppress(OSError):  # the last of several, where the main process cannot
+                self._folder.parent.rmdir()
 
     def _take_message(self) -> None:
         try:
             message = self._main.recv()
-        except (EOFError, ConnectionResetError):
+        except (EOFError, OSError):
             raise _MainIsGone from None
         if message is None:
             self._stopping = True
@@ -124,16 +152,18 @@ class Supervisor:
         for position in range(len(work.requests)):
             if self._stopping:
                 return
+            started = now()
             # A runner that is killed from outside is not the learner's doing: once more, then it is.
             outcome = self._run(work, position, names) or self._run(work, position, names) or _KILLED_TWICE
+            outcome = _held_to_time(outcome, self._learners[work.requests[position].learner])
             overhead = time.monotonic() - self._last_event - (outcome.wall_seconds or 0.0)
-            self._main.send(("ended", work.number, position, outcome, overhead))
+            self._main.send(("ended", work.number, position, outcome, started, overhead))
             self._last_event = time.monotonic()
 
     def _draw(self, work: Work) -> DrawnNetwork:
         for _ in range(2):
             runner = self._steady_runner()
-            runner.connection.send(("draw", work))
+            runner.ask("draw", work)
             reply, _ = self._watch(runner, None)
             if reply is None:
                 continue
@@ -150,7 +180,7 @@ class Supervisor:
         if needs_isolation(learner):
             return self._run_alone(work, position, learner, names)
         runner = self._runner_with(work)
-        runner.connection.send(("learn", position))
+        runner.ask("learn", position)
         reply, outcome = self._watch(runner, learner)
         return outcome if reply is None else outcome_from(reply, names)
 
@@ -164,11 +194,13 @@ class Supervisor:
             self._end(runner)
         if reply is None:
             return outcome
+        if reply["event"] == "cannot-draw":
+            raise _CannotDraw(reply["message"])
         if reply["event"] == "outcome":
             return outcome_from(reply, names)
         # Scored by a process that no stranger's code has touched.
         judge = self._runner_with(work)
-        judge.connection.send(("score", position, reply["timed"]))
+        judge.ask("score", position, reply["timed"])
         reply, outcome = self._watch(judge, None)
         return outcome if reply is None else outcome_from(reply, names)
 
@@ -186,49 +218,54 @@ class Supervisor:
         outcome : Outcome or None
             Why it is gone; None if it was killed by neither itself nor us.
         """
-        began = time.monotonic()
         load = os.getloadavg()[0]
+        clocks = {} if learner is None else {"loading": LOADING_SECONDS, "calling": learner.limits.seconds}
+        phase, end = "", float("inf")
         while True:
-            left = None if learner is None else began + learner.limits.seconds - time.monotonic()
-            if left is not None and learner is not None and left <= 0:
-                return None, self._stop(
-                    runner, Status.TIMEOUT, f"over {learner.limits.seconds:g} seconds", learner, load
-                )
-            ready = wait(
-                [self._main, runner.connection], POLL_SECONDS if left is None else min(POLL_SECONDS, left)
-            )
+            left = end - time.monotonic()
+            if learner is not None and left <= 0:
+                return None, self._stop(runner, _over_time(learner, phase), load)
+            ready = wait([self._main, runner.connection], min(POLL_SECONDS, left))
             if self._main in ready:
                 self._take_message()
             if runner.connection in ready:
-                try:
-                    reply = json.loads(runner.connection.recv_bytes())
-                except (EOFError, ConnectionResetError):
+                reply = runner.answer()
+                if reply is None:
                     return None, self._obituary(runner, load)
-                if reply["event"] == "calling":
-                    began = time.monotonic()
-                    continue
-                return reply, None
-            if not ready:
+                if reply["event"] not in clocks:
+                    return reply, None
+                phase = reply["event"]
+                end = time.monotonic() + clocks[phase]
+            elif not ready:
+                # A child of the learner's may hold the connection open when the runner itself is gone.
+                if processes.has_exited(runner.pid) and not runner.connection.poll():
+                    return None, self._obituary(runner, load)
                 self._trim_output(runner)
                 if learner is not None and self._holds(runner) > learner.limits.memory_mb:
-                    cause = f"over {learner.limits.memory_mb} MB of memory"
-                    return None, self._stop(runner, Status.OUT_OF_MEMORY, cause, learner, load)
+                    cause = f"over the limit of {learner.limits.memory_mb} MB of memory"
+                    return None, self._stop(runner, Outcome(Status.OUT_OF_MEMORY, cause), load)
 
     def _holds(self, runner: _Runner) -> float:
-        return memory.resident_mb(memory.session_members(runner.pid))
+        """Return the memory of a runner and all that was started in it, adopted processes too."""
+        if runner is self._steady:
+            return memory.resident_mb(processes.with_descendants([runner.pid]))
+        return memory.resident_mb(processes.with_descendants(processes.children(os.getpid()) - self._kept()))
 
-    def _stop(self, runner: _Runner, status: Status, cause: str, learner: Learner, load: float) -> Outcome:
+    def _stop(self, runner: _Runner, outcome: Outcome, load: float) -> Outcome:
         tail = self._tail(runner)
         self._end(runner)
-        seconds = learner.limits.seconds if status == Status.TIMEOUT else None
-        return Outcome(status, cause + tail, wall_seconds=seconds, load=load)
+        return replace(outcome, cause=outcome.cause + tail, load=load)
 
     def _obituary(self, runner: _Runner, load: float) -> Outcome | None:
         tail = self._tail(runner)
+        by_itself = processes.has_exited(runner.pid, GRACE_SECONDS)
         code = self._end(runner)
-        if code == -signal.SIGKILL:
+        if not by_itself:
+            how = "closed its connection to the harness"
+        elif code in (-signal.SIGKILL, -signal.SIGTERM):
             return None
-        how = f"died of signal {signal.Signals(-code).name}" if code < 0 else f"ended with exit code {code}"
+        else:
+            how = f"died of signal {_signal_name(-code)}" if code < 0 else f"ended with exit code {code}"
         return Outcome(Status.CRASHED, f"the process {how}{tail}", load=load)
 
     # Runners ----------------------------------------------------------------------------------------
@@ -247,7 +284,7 @@ class Supervisor:
 
     def _fork(self, main: Any) -> _Runner:
         ours, theirs = Pipe()
-        folder = Path(tempfile.mkdtemp(prefix="arcassay-"))
+        folder = Path(tempfile.mkdtemp(dir=self._folder))
         output = os.open(folder / ".output", os.O_RDWR | os.O_CREAT | os.O_APPEND | os.O_CLOEXEC, 0o600)
         os.unlink(folder / ".output")
         pid = fork_runner(main, theirs, output, folder)
@@ -259,11 +296,11 @@ class Supervisor:
         if runner.ended:
             return 0
         runner.ended = True
-        if not _has_exited(runner.pid, 0.0):
-            _signal_group(runner.pid, signal.SIGTERM)
-            _has_exited(runner.pid, GRACE_SECONDS)
-        # Not yet reaped, the leader keeps the group's number from being given to anybody else.
-        _signal_group(runner.pid, signal.SIGKILL)
+        if not processes.has_exited(runner.pid):
+            processes.signal_group(runner.pid, signal.SIGTERM)
+            processes.has_exited(runner.pid, GRACE_SECONDS)
+        # Not yet waited for, the leader keeps the group's number from being given to anybody else.
+        processes.signal_group(runner.pid, signal.SIGKILL)
         _, status = os.waitpid(runner.pid, 0)
         self._end_orphans()
         runner.connection.close()
@@ -272,13 +309,15 @@ class Supervisor:
         return os.waitstatus_to_exitcode(status)
 
     def _end_orphans(self) -> None:
-        keep = {self._steady.pid} if self._steady is not None and not self._steady.ended else set()
-        while orphans := _children() - keep:
+        while orphans := processes.children(os.getpid()) - self._kept():
             for pid in orphans:
                 with contextlib.suppress(ProcessLookupError):
                     os.kill(pid, signal.SIGKILL)
                 with contextlib.suppress(ChildProcessError):
                     os.waitpid(pid, 0)
+
+    def _kept(self) -> set[int]:
+        return set() if self._steady is None or self._steady.ended else {self._steady.pid}
 
     def _trim_output(self, runner: _Runner) -> None:
         if os.fstat(runner.output).st_size > MAX_OUTPUT_BYTES:
@@ -290,7 +329,25 @@ class Supervisor:
         return f"\n{text}" if text else ""
 
 
-_KILLED_TWICE = Outcome(Status.CRASHED, "the process was killed twice from outside (signal SIGKILL)")
+_KILLED_TWICE = Outcome(
+    Status.CRASHED,
+    "the process was killed twice (signal SIGKILL or SIGTERM), though no limit was passed: by itself, by "
+    "somebody, or by the system when memory ran out",
+)
+
+
+def _over_time(learner: Learner, phase: str = "calling") -> Outcome:
+    if phase == "loading":
+        return Outcome(Status.ERROR, f"importing the learner took over {LOADING_SECONDS:g} s")
+    seconds = learner.limits.seconds
+    return Outcome(Status.TIMEOUT, f"over the limit of {seconds:g} s", wall_seconds=seconds)
+
+
+def _held_to_time(outcome: Outcome, learner: Learner) -> Outcome:
+    """Judge by the learner's own clock, which starts and stops a little before ours."""
+    if outcome.status == Status.DONE and (outcome.wall_seconds or 0.0) > learner.limits.seconds:
+        return replace(_over_time(learner), load=outcome.load)
+    return outcome
 
 
 def _drawn_from(work: Work, reply: dict[str, Any]) -> tuple[DrawnNetwork, DrawnDataset]:
@@ -303,34 +360,41 @@ def _drawn_from(work: Work, reply: dict[str, Any]) -> tuple[DrawnNetwork, DrawnD
     return network, DrawnDataset(work.dataset_key, work.index, reply["distortions"], view_digest)
 
 
-def _has_exited(pid: int, patience: float) -> bool:
-    """Whether a child ends within `patience` seconds; it is not reaped."""
-    end = time.monotonic() + patience
-    while os.waitid(os.P_PID, pid, os.WEXITED | os.WNOHANG | os.WNOWAIT) is None:
-        if time.monotonic() >= end:
-            return False
-        time.sleep(0.001)
-    return True
-
-
-def _signal_group(group: int, number: signal.Signals) -> None:
-    with contextlib.suppress(ProcessLookupError, PermissionError):
-        os.killpg(group, number)
-
-
-def _children() -> set[int]:
+def _signal_name(number: int) -> str:
     try:
-        text = Path(f"/proc/self/task/{os.getpid()}/children").read_text()
-    except OSError:  # no such file on this system: orphans are left to it
-        return set()
-    return {int(word) for word in text.split()}
+        return signal.Signals(number).name
+    except ValueError:  # a real-time signal
+        return str(number)
 
 
-def main(file: int) -> None:
-    """Serve the main process, whose connection's other end is the open file `file`."""
+def _warm_up() -> None:
+    """Compile what is not in the cache in a child, whose memory is not that of every runner to come."""
+    if not compiled.is_warm():
+        parent = os.getpid()
+        pid = os.fork()
+        if not pid:
+            try:
+                processes.die_with_parent(parent)
+                compiled.warm_all()
+            finally:
+                os._exit(0)
+        os.waitpid(pid, 0)
+    compiled.warm_all()
+
+
+def _end_in_order(number: int, frame: FrameType | None) -> None:
+    raise SystemExit(1)  # so that the main process looks for what is left
+
+
+def main(file: int, parent: int, folder: str) -> None:
+    """Serve the main process `parent`, whose connection's other end is the open file `file`."""
+    processes.die_with_parent(parent)  # until its own end is looked for: loading may take minutes
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-    if sys.platform.startswith("linux"):
-        ctypes.CDLL(None, use_errno=True).prctl(_SET_CHILD_SUBREAPER, 1)
+    signal.signal(signal.SIGTERM, _end_in_order)
     connection = Connection(file)
-    learners: tuple[Learner, ...] = connection.recv()
-    Supervisor(connection, learners).serve()
+    learners, path = connection.recv()
+    sys.path += [place for place in path if place not in sys.path]
+    supervisor = Supervisor(connection, learners, Path(folder))
+    processes.adopt_orphans()
+    processes.survive_parent()
+    supervisor.serve()

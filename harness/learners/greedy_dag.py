@@ -33,11 +33,11 @@ from harness.counts import (
     Columns,
     Workspace,
     append_column,
+    count_within,
     index_rows,
     prepare,
     split_planes,
     tabulate_index,
-    tabulate_planes,
     workspace,
 )
 from harness.family_scores import (
@@ -290,7 +290,7 @@ def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, in
                 greatest = gain
     for y in range(p):
         if state.best_gain[y] >= greatest - width:
-            if _leads(state, y, state.best_source[y]):
+            if _has_bit(state.reaches[y], state.best_source[y]):
                 _find_best_addition(state, y)
             greatest = max(greatest, state.best_gain[y])
     if not greatest > width:
@@ -309,7 +309,8 @@ def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, in
                     move, first_x, first_y = REVERSE, x, y
         if state.best_gain[y] >= enough:
             for x in range(min(p, first_x + 1)):
-                if state.gains[y, x] >= enough and (x, y) < (first_x, first_y) and _may_add(state, x, y):
+                is_legal = not state.is_parent[y, x] and not _has_bit(state.reaches[y], x)
+                if state.gains[y, x] >= enough and is_legal and (x, y) < (first_x, first_y):
                     move, first_x, first_y = ADD, x, y
                     break
     return move, first_x, first_y
@@ -319,23 +320,17 @@ def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, in
 def _find_best_addition(state: Search, y: int) -> None:
     gains = state.gains[y]
     best, source = -np.inf, 0
+    is_parent, reached = state.is_parent[y], state.reaches[y]
     for x in range(gains.shape[0]):
-        if gains[x] > best and _may_add(state, x, y):
+        if gains[x] > best and not is_parent[x] and not _has_bit(reached, x):
             best, source = gains[x], x
     state.best_gain[y] = best
     state.best_source[y] = source
 
 
 @inlined
-def _leads(state: Search, source: int, target: int) -> bool:
-    # Whether a directed path leads from one variable to the other.
-    word = state.reaches[source, target // WORD_ROWS] >> np.uint64(target % WORD_ROWS)
-    return bool(word & np.uint64(1))
-
-
-@inlined
-def _may_add(state: Search, x: int, y: int) -> bool:
-    return not state.is_parent[y, x] and not _leads(state, y, x)
+def _has_bit(bits: NDArray[np.uint64], v: int) -> bool:
+    return bool((bits[v // WORD_ROWS] >> np.uint64(v % WORD_ROWS)) & np.uint64(1))
 
 
 @inlined
@@ -345,7 +340,7 @@ def _may_reverse(state: Search, x: int, y: int, max_parents: int) -> bool:
         return False
     closes = False
     for z in state.parents[y, : state.n_parents[y]]:
-        closes |= z != x and _leads(state, x, z)
+        closes |= z != x and _has_bit(state.reaches[x], z)
     return not closes
 
 
@@ -374,9 +369,8 @@ def _remove_parent(state: Search, x: int, y: int) -> None:
 
 
 @inlined
-def _add_reach(state: Search, x: int, y: int) -> None:
-    # x now reaches y and all that y reaches.
-    own, others = state.reaches[x], state.reaches[y]
+def _add_reach(own: NDArray[np.uint64], others: NDArray[np.uint64], y: int) -> None:
+    # Who reaches y reaches all that y does.
     for w in range(own.shape[0]):
         own[w] |= others[w]
     own[y // WORD_ROWS] |= np.uint64(1) << np.uint64(y % WORD_ROWS)
@@ -386,8 +380,8 @@ def _add_reach(state: Search, x: int, y: int) -> None:
 def _extend_paths(state: Search, x: int, y: int) -> None:
     # After x -> y was added.
     for v in range(state.scores.shape[0]):
-        if v == x or _leads(state, v, x):
-            _add_reach(state, v, y)
+        if v == x or _has_bit(state.reaches[v], x):
+            _add_reach(state.reaches[v], state.reaches[y], y)
 
 
 @inlined
@@ -408,7 +402,7 @@ def _trace_paths(state: Search) -> None:
     for k in range(p):
         y = order[k]
         for x in state.parents[y, : state.n_parents[y]]:
-            _add_reach(state, x, y)
+            _add_reach(state.reaches[x], state.reaches[y], y)
             n_children[x] -= 1
             if n_children[x] == 0:
                 order[n_ready] = x
@@ -461,7 +455,11 @@ def _score_additions(
             continue
         r_added = columns.cardinalities[x]
         q_added = min(q * r_added, MAX_JOINT_STATES)
-        if 0 < n_planes * r_added <= MAX_PLANE_CELLS and tabulate_planes(columns, x, n_planes, space):
+        at = columns.offsets[x]
+        if columns.offsets[x + 1] > at and 0 < n_planes * r_added <= MAX_PLANE_CELLS:
+            count_within(
+                columns.planes[at : at + r_added], space.base, space.base_sizes, n_planes, space.table
+            )
             gains[x] = score_table(space.table, n_planes // r, r, r_added, q_added, rule) - own
             continue
         if n_numbers == 0:

@@ -9,14 +9,11 @@ the file is gone).
 
 from __future__ import annotations
 
-import contextlib
 import datetime
 import json
-import os
 import sqlite3
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from importlib import resources
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -25,10 +22,9 @@ from generators.errors import InputError
 from generators.graph import Graph
 from generators.streams import canonical_json
 from harness.ledger.lock import WriterLock, is_on_network
+from harness.ledger.opening import connect, create, identity, naming, refuse_what_is_no_ledger
 from harness.records import Learner, Limits, MachineStop, Outcome, Status
 
-APPLICATION_ID = 0x41524359
-FORMAT = 1
 MEASURE_COLUMNS = (
     "class_shd",
     "dag_shd",
@@ -45,18 +41,6 @@ MEASURE_COLUMNS = (
     "perfect_map",
 )
 SCORER_REVISION = 1
-_MACHINE_CODES = {
-    sqlite3.SQLITE_FULL,
-    sqlite3.SQLITE_IOERR,
-    sqlite3.SQLITE_READONLY,
-    sqlite3.SQLITE_CANTOPEN,
-    sqlite3.SQLITE_BUSY,
-    sqlite3.SQLITE_LOCKED,
-    sqlite3.SQLITE_PERM,
-}
-_DAMAGE_CODES = {sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB}
-_HEADER_MAGIC = b"SQLite format 3\x00"
-_HEADER_BYTES = 100
 
 
 @dataclass(frozen=True, slots=True)
@@ -122,7 +106,7 @@ class Ledger:
         self.path = path
         self._connection = connection
         self._lock = lock
-        self._file = _identity(path)
+        self._file = identity(path)
         self._ids: dict[tuple[str, Any], int] = {}
 
     @classmethod
@@ -135,9 +119,9 @@ class Ledger:
             If there is no such file, or it is no ledger that this version reads.
         """
         path = Path(path)
-        _refuse_what_is_no_ledger(path)
-        connection = _connect_sound(path)
-        with _naming(path):
+        refuse_what_is_no_ledger(path)
+        connection = connect(path)
+        with naming(path):
             connection.execute("PRAGMA query_only = ON")
         return cls(path, connection, None)
 
@@ -156,13 +140,13 @@ class Ledger:
         if not path.parent.is_dir():
             raise InputError(f"{path}: the folder {str(path.parent)!r} does not exist")
         if path.exists():
-            _refuse_what_is_no_ledger(path)
+            refuse_what_is_no_ledger(path)
         lock = WriterLock(path)
         try:
             if not path.exists():
-                _create(path)
-            connection = _connect_sound(path)
-            with _naming(path):
+                create(path)
+            connection = connect(path)
+            with naming(path):
                 # The shared memory of a write-ahead log is not shared over a network.
                 connection.execute(f"PRAGMA journal_mode = {'TRUNCATE' if is_on_network(path) else 'WAL'}")
                 connection.execute("PRAGMA synchronous = FULL")
@@ -190,7 +174,7 @@ class Ledger:
 
     def begin_session(self, *, host: str, cpu: str, versions: Mapping[str, str], workers: int) -> int:
         """Store a session and return its number."""
-        with _naming(self.path):
+        with naming(self.path):
             session = self._insert(
                 "session",
                 host=host,
@@ -204,7 +188,7 @@ class Ledger:
 
     def end_session(self, session: int, ending: str) -> None:
         """Note when and how a session ended."""
-        with _naming(self.path):
+        with naming(self.path):
             self._execute("UPDATE session SET ended = ?, ending = ? WHERE id = ?", (now(), ending, session))
         self.commit()
 
@@ -213,7 +197,7 @@ class Ledger:
     ) -> int:
         """Store a plan's text, what it expands to and its labels; a known plan becomes the newest again."""
         started = now()
-        with _naming(self.path):
+        with naming(self.path):
             row = self._execute("SELECT id FROM plan WHERE digest = ?", (digest,)).fetchone()
             if row is None:
                 plan = self._insert(
@@ -251,7 +235,7 @@ class Ledger:
             If a network or view differs from the stored one: the random streams have changed between
             versions, and the old runs cannot be continued.
         """
-        with _naming(self.path):
+        with naming(self.path):
             network_id = self._network_id(network)
             known = self._ids.get(("dataset", (dataset.key, dataset.distortions)))
             if known is not None:
@@ -323,7 +307,7 @@ class Ledger:
             "started": started or now(),
             "asked_by": asked_by,
         }
-        with _naming(self.path):
+        with naming(self.path):
             learner_id = self._learner_id(learner)
             row = self._execute(
                 "SELECT id FROM run WHERE dataset = ? AND rows = ? AND learner = ?",
@@ -359,17 +343,17 @@ class Ledger:
         MachineStop
             If the disk is full or fails, or the file is no longer where it was opened.
         """
-        with _naming(self.path):
+        with naming(self.path):
             self._connection.commit()
         # SQLite writes on into a file that was deleted or moved, and nobody would find it again.
-        if _identity(self.path) != self._file:
+        if identity(self.path) != self._file:
             raise MachineStop(f"{self.path}: the ledger was deleted or moved while it was written")
 
     # Reading ---------------------------------------------------------------------------------------
 
     def n_runs(self) -> int:
         """Return how many runs are stored, of whatever plan."""
-        with _naming(self.path):
+        with naming(self.path):
             return int(self._execute("SELECT count(*) FROM run").fetchone()[0])
 
     def known_runs(self) -> dict[RunKey, KnownRun]:
@@ -379,7 +363,7 @@ class Ledger:
             "JOIN dataset ON dataset.id = run.dataset JOIN learner ON learner.id = run.learner"
         )
         known = {}
-        with _naming(self.path):
+        with naming(self.path):
             for key, distortions, rows, learner, status, seconds, limits in self._execute(query):
                 stored = json.loads(limits)
                 known[RunKey(key, distortions, rows, learner)] = KnownRun(
@@ -389,7 +373,7 @@ class Ledger:
 
     def newest_plan(self) -> tuple[int, str, dict[str, Any]] | None:
         """Return the plan that was started last: its number, text and expansion."""
-        with _naming(self.path):
+        with naming(self.path):
             row = self._execute(
                 "SELECT id, text, expansion FROM plan ORDER BY last_started DESC, id DESC LIMIT 1"
             ).fetchone()
@@ -397,7 +381,7 @@ class Ledger:
 
     def sessions(self) -> list[dict[str, Any]]:
         """Return all sessions, oldest first."""
-        with _naming(self.path):
+        with naming(self.path):
             cursor = self._execute("SELECT * FROM session ORDER BY id")
             sessions = [dict(zip([c[0] for c in cursor.description], row, strict=True)) for row in cursor]
         return [{**session, "versions": json.loads(session["versions"])} for session in sessions]
@@ -417,7 +401,7 @@ class Ledger:
             "JOIN network ON network.id = dataset.network JOIN learner ON learner.id = run.learner "
             "LEFT JOIN measure ON measure.run = run.id"
         )
-        with _naming(self.path):
+        with naming(self.path):
             cursor = self._execute(query)
             names = [column[0] for column in cursor.description]
             return [dict(zip(names, row, strict=True)) for row in cursor]
@@ -500,102 +484,3 @@ def graph_text(graph: Graph) -> str:
 def named_edges(text: str, names: Sequence[str]) -> list[list[str]]:
     """Return stored edges with names: [[source, target, kind], ...]."""
     return [[names[i], names[j], "directed" if kind else "undirected"] for i, j, kind in json.loads(text)]
-
-
-def _refuse_what_is_no_ledger(path: Path) -> None:
-    # Read from the file itself: even opening a stranger's file through SQLite could write beside it.
-    try:
-        with path.open("rb") as file:
-            header = file.read(_HEADER_BYTES)
-    except FileNotFoundError:
-        raise InputError(f"{path}: there is no such ledger") from None
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read ({error.strerror})") from None
-    if len(header) < _HEADER_BYTES or not header.startswith(_HEADER_MAGIC):
-        raise InputError(f"{path}: is not a ledger, or its first bytes are damaged; it was left as it is")
-    if int.from_bytes(header[68:72], "big") != APPLICATION_ID:
-        raise InputError(f"{path}: is a database, but not a ledger of arcassay; it was left as it is")
-    written = int.from_bytes(header[60:64], "big")
-    if not 1 <= written <= FORMAT:
-        raise InputError(
-            f"{path}: was written by ledger format {written}; this version reads up to {FORMAT}. "
-            "Upgrade the package; the ledger was left as it is"
-        )
-
-
-def _connect_sound(path: Path) -> sqlite3.Connection:
-    """Connect to a ledger, for writing where that is allowed, or refuse a damaged one as it is."""
-    file = path.resolve()
-    log = file.with_name(f"{file.name}-wal")
-    has_log = log.exists() and log.stat().st_size > 0
-    if has_log:
-        # A connection that may write would move the log into the damaged file when it is closed.
-        with contextlib.closing(_connect(path, "ro")) as connection:
-            _refuse_damage(path, connection)
-    # Where it may, a reader tidies up the log's files when it is the last to close. Where it may not, it
-    # could not make them either: without a log, nobody writes, and the file can be read as it is.
-    may_write = os.access(file, os.W_OK) and os.access(file.parent, os.W_OK)
-    connection = _connect(path, "rw" if may_write else "ro" if has_log else "ro&immutable=1")
-    if not has_log:
-        try:
-            _refuse_damage(path, connection)
-        except BaseException:
-            connection.close()
-            raise
-    return connection
-
-
-def _refuse_damage(path: Path, connection: sqlite3.Connection) -> None:
-    with _naming(path):
-        found = str(connection.execute("PRAGMA quick_check(1)").fetchone()[0])
-    if found != "ok":
-        raise InputError(_damage_message(path, found.splitlines()[-1]))
-
-
-def _damage_message(path: Path, what: object) -> str:
-    return f"{path}: the ledger is damaged ({what}); it was left as it is"
-
-
-def _create(path: Path) -> None:
-    draft = path.with_name(f".{path.name}.{os.getpid()}.new")
-    schema = resources.files("harness.ledger").joinpath("schema.sql").read_text(encoding="utf-8")
-    with _naming(path):
-        try:
-            with contextlib.closing(sqlite3.connect(draft, isolation_level=None)) as connection:
-                connection.execute(f"PRAGMA application_id = {APPLICATION_ID}")
-                connection.execute(f"PRAGMA user_version = {FORMAT}")
-                connection.executescript(schema)
-            os.replace(draft, path)
-        finally:
-            draft.unlink(missing_ok=True)
-
-
-def _connect(path: Path, mode: str) -> sqlite3.Connection:
-    with _naming(path):
-        uri = f"{path.resolve().as_uri()}?mode={mode}"
-        return sqlite3.connect(uri, uri=True, timeout=10.0)
-
-
-def _identity(path: Path) -> tuple[int, int] | None:
-    try:
-        facts = os.stat(path)
-    except OSError:
-        return None
-    return facts.st_dev, facts.st_ino
-
-
-@contextlib.contextmanager
-def _naming(path: Path) -> Iterator[None]:
-    """Turn what the machine does to the file into `MachineStop`, and damage into `InputError`, with its name."""
-    try:
-        yield
-    except json.JSONDecodeError as error:
-        raise InputError(_damage_message(path, f"a field is no JSON: {error}")) from error
-    except sqlite3.DatabaseError as error:
-        # The primary code; text that is not UTF-8 is found by Python, which gives none.
-        code = getattr(error, "sqlite_errorcode", -1) & 0xFF
-        if code in _DAMAGE_CODES or (code == 0xFF and isinstance(error, sqlite3.OperationalError)):
-            raise InputError(_damage_message(path, error)) from error
-        if code in _MACHINE_CODES:
-            raise MachineStop(f"{path}: {error}. What was committed before is safe; run again to resume") from error
-        raise  # a bug of ours

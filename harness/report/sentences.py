@@ -98,7 +98,8 @@ def _share(share: MetShare, requirement: Requirement) -> str:
     value, low, high = (
         _near(each, requirement.assurance) for each in (interval.value, interval.low, interval.high)
     )
-    return f"{value} of {share.n_runs:,} runs ({percent(interval.confidence)} interval {low} to {high})"
+    met = count_of(share.n_met, share.n_runs)
+    return f"{value} ({met} runs, {percent(interval.confidence)} interval {low} to {high})"
 
 
 def _near(value: float, target: float) -> str:
@@ -246,8 +247,8 @@ def left_out(shares: Iterable[MetShare], heading: str) -> str | None:
         return None
     return in_condition(
         heading,
-        f"{count_of(share.n_left_out, share.n_networks)} networks ({fixed(share.share_left_out, 2)}) are left "
-        "out for every learner alike, because their truth leaves a bounded measure undefined.",
+        f"{count_of(share.n_left_out, share.n_networks)} networks ({fixed(share.share_left_out, 2)}) are "
+        "left out for every learner alike, because their truth leaves a bounded measure undefined.",
     )
 
 

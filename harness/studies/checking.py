@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
 import time
+from collections import Counter
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from typing import Any
@@ -54,7 +56,8 @@ class Check:
         if self.seconds is None:
             lines.append(f"No run ended within {PROBE_SECONDS:g} s: the time cannot be told.")
             return lines
-        time_line = f"About {time_span(self.seconds)} with {_n(self.n_workers, 'worker')} on this machine"
+        span = f"About {time_span(self.seconds)}" if self.seconds >= 1 else "Under 1 s"
+        time_line = f"{span} with {_n(self.n_workers, 'worker')} on this machine"
         if self.n_probed < self.n_cells:
             time_line += (
                 f"; {self.n_probed} of {self.n_cells} combinations of condition, rows and learner were "
@@ -90,11 +93,11 @@ def check_plan(plan: Plan, *, n_workers: int | None = None) -> Check:
     workers = n_workers or default_workers(threads)
     works = list(missing_work(plan, network_keys(plan), {}))
     progress = Progress.of(works, workers)
-    n_cells = len(progress.left)
+    runs = Counter(progress.left)  # all of them: the probe stores nothing
     _probe(plan, works, progress, workers, threads)
-    n_probed = len(progress.measured)
-    seconds = progress.seconds_left()
-    return Check(plan, workers, expected_runs(plan), seconds, n_probed, n_cells)
+    return Check(
+        plan, workers, expected_runs(plan), progress.seconds_for(runs), progress.n_measured, len(runs)
+    )
 
 
 def _probe(plan: Plan, works: list[Work], progress: Progress, workers: int, threads: int) -> None:
@@ -115,10 +118,11 @@ def _probe(plan: Plan, works: list[Work], progress: Progress, workers: int, thre
 def _first_of_each(works: list[Work]) -> Iterator[Work]:
     """Give every combination once: few rows first, so that much is seen before time is up."""
     firsts = {work.condition: work for work in reversed(works)}
+    numbers = itertools.count()
     for rows in sorted({request.rows for work in firsts.values() for request in work.requests}):
-        for number, work in firsts.items():
-            own = tuple(request for request in work.requests if request.rows == rows)
-            yield replace(work, number=number * 1_000_000 + rows, requests=own)
+        for work in firsts.values():
+            if own := tuple(request for request in work.requests if request.rows == rows):
+                yield replace(work, number=next(numbers), requests=own)
 
 
 def _n(count: int, word: str) -> str:

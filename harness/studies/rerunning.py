@@ -99,9 +99,10 @@ def do_again(study: Study, name: str) -> Again:
     condition = study.facts.conditions[int(stored["condition"])]
     learner = next(each for each in study.facts.learners if each.label == stored["label"])
     key = network_key(study.facts.seed, condition.networks, int(stored["replicate"]))
-    index = next(
-        i for i in range(condition.datasets) if dataset_key(key, i).hex()[:SHORT_KEY] == stored["dataset"]
-    )
+    names = [dataset_key(key, i).hex()[:SHORT_KEY] for i in range(condition.datasets)]
+    if stored["dataset"] not in names:
+        raise InputError(f"{study.ledger}: run {name!r}: its network file has changed since")
+    index = names.index(stored["dataset"])
     request = Request(0, int(stored["rows"]), settings_for(learner, condition))
     work = Work(
         0,
@@ -120,7 +121,7 @@ def do_again(study: Study, name: str) -> Again:
             outcome = scored(material, learner, timed_call(load(learner), material, request))
     except InputError:
         raise
-    except Exception as error:
+    except (Exception, SystemExit) as error:
         outcome = failed(error)
     edges = [] if outcome.graph is None else [list(edge) for edge in outcome.graph.edges()]
     return Again(

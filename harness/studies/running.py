@@ -177,7 +177,15 @@ def _store(event: Event, plan: Plan, store: Ledger, session: int) -> None:
         return
     dataset = store.dataset_id(event.work.dataset_key, canonical_json(event.work.data))
     learner = plan.learners[event.request.learner]
-    store.store_run(dataset, event.request.rows, learner, event.outcome, session=session, asked_by="run")
+    store.store_run(
+        dataset,
+        event.request.rows,
+        learner,
+        event.outcome,
+        session=session,
+        asked_by="run",
+        started=event.started,
+    )
 
 
 def _by_threads(plan: Plan, works: Sequence[Work]) -> dict[int, list[Work]]:

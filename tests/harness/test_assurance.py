@@ -57,6 +57,15 @@ def test_failed_runs_do_not_meet_it_and_stay_in_the_count(make_runs):
     assert share.interval.value == 0.25
 
 
+def test_a_run_cut_off_at_its_limit_does_not_meet_a_bound_on_time(make_runs):
+    """A timed-out run has a wall time, below the bound even, and meets nothing all the same."""
+    runs = make_runs([{"wall_seconds": 5.0}, {"status": "timeout", "cause": "limit", "wall_seconds": 10.0}])
+
+    (share,) = met_shares(runs, Requirement((Bound("wall_seconds", "<=", 60.0),)))
+
+    assert (share.n_met, share.n_runs) == (1, 2)
+
+
 def test_an_answer_that_leaves_a_measure_undefined_does_not_meet_its_bound(make_runs):
     """Precision of nothing claimed meets no bound, not even one from above."""
     silent: dict[str, Any] = {

@@ -386,11 +386,12 @@ def test_chance_is_called_with_the_density_of_the_condition() -> None:
     assert dict(learner.settings) == {}
 
 
-def test_a_density_that_the_plan_gives_to_chance_holds() -> None:
-    """What the plan says goes before what the condition suggests."""
-    plan = parse_plan(plan_of(learners='[[learner]]\nmethod = "chance"\nmean_parents = 0.5'))
+@pytest.mark.parametrize("density", [0.0, 0.5, 1.0, 1.2, 1.5, 2.0])
+def test_a_density_that_the_plan_gives_to_chance_holds(density: float) -> None:
+    """What the plan says goes before what the condition suggests, whatever the number."""
+    plan = parse_plan(plan_of(learners=f'[[learner]]\nmethod = "chance"\nmean_parents = {density}'))
 
-    assert settings_for(plan.learners[0], plan.conditions[0]) == {"mean_parents": 0.5}
+    assert settings_for(plan.learners[0], plan.conditions[0]) == {"mean_parents": density}
 
 
 def test_other_learners_are_called_with_their_settings_alone(folder: Path) -> None:

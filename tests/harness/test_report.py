@@ -247,12 +247,12 @@ def test_the_answer_names_the_row_count_with_its_interval(make_study):
     lines = answers.conditions[0].lines
 
     assert lines == (
-        "keen: 1,000 rows are shown to suffice, share 0.88 of 100 runs (95 % interval 0.8019 to 0.93). Best "
-        "estimate on the grid: 500 rows, share 0.84 of 100 runs (95 % interval 0.76 to 0.90). More rows fall "
-        "below 0.8 again: 0.60 of 100 runs (95 % interval 0.50 to 0.69) at 2,000 rows; the whole interval "
-        "lies below.",
-        "Baseline idle: not reached on this grid up to 2,000 rows. The greatest share was 0.00 of 100 runs "
-        "(95 % interval 0.00 to 0.04).",
+        "keen: 1,000 rows are shown to suffice, share 0.88 (88 of 100 runs, 95 % interval 0.8019 to 0.93). "
+        "Best estimate on the grid: 500 rows, share 0.84 (84 of 100 runs, 95 % interval 0.76 to 0.90). More "
+        "rows fall below 0.8 again: 0.60 (60 of 100 runs, 95 % interval 0.50 to 0.69) at 2,000 rows; the "
+        "whole interval lies below.",
+        "Baseline idle: not reached on this grid up to 2,000 rows. The greatest share was 0.00 (0 of "
+        "100 runs, 95 % interval 0.00 to 0.04).",
     )
     assert any(
         "Here the share falls below the assurance again for keen at 2,000 rows." in c
@@ -265,8 +265,8 @@ def test_what_is_not_reached_is_said_with_the_largest_row_count(make_study):
     answers = build_answers(*study_with_shares(make_study, {250: 0, 500: 0}))
 
     assert answers.conditions[0].lines[0] == (
-        "keen: not reached on this grid up to 500 rows. No run met the requirement: share 0.00 of 100 runs "
-        "(95 % interval 0.00 to 0.04) at 250 rows."
+        "keen: not reached on this grid up to 500 rows. No run met the requirement: share 0.00 (0 of 100 "
+        "runs, 95 % interval 0.00 to 0.04) at 250 rows."
     )
 
 
@@ -277,7 +277,7 @@ def test_two_decimals_never_hide_the_side_of_the_target(make_study):
 
     line = build_answers(runs, close).conditions[0].lines[0]
 
-    assert "share was 0.7900 of 100 runs" in line
+    assert "share was 0.7900 (79 of 100 runs" in line
 
 
 def test_too_few_networks_are_named(make_study):
@@ -407,6 +407,16 @@ def test_a_figure_is_well_formed_and_names_its_learners():
     texts = [element.text for element in root.iter("text")]
     assert root[0].text == "Title"
     assert set(texts) >= {f"learner {i}" for i in range(8)}
+
+
+@pytest.mark.parametrize(
+    "label", ["$x^2$", r"$\nonsense$", "<b>&amp;", "\N{SNOWMAN} \N{CJK UNIFIED IDEOGRAPH-540D}"]
+)
+def test_a_figure_writes_labels_as_they_are(label):
+    """Labels are no mathematics and no markup, and need no glyph that the drawing library has."""
+    root = ElementTree.fromstring(draw(figure_of((Curve(label, (Point(100, 1.0, 1, 1),)),))))
+
+    assert label in [element.text for element in root.iter("text")]
 
 
 def test_labels_of_a_figure_do_not_overlap():

@@ -25,6 +25,14 @@ def test_with_one_value_per_network_the_error_is_the_one_of_independent_runs(rng
     assert math.isclose(values.mean(), estimate.value)
 
 
+def test_few_networks_have_the_unbiased_error():
+    """With three networks the divisor is 2, not 3: 1 / sqrt(3) for -1, 0, 1, not sqrt(2) / 3."""
+    estimate = mean_with_error([-1.0, 0.0, 1.0], range(3))
+
+    assert math.isclose(1 / math.sqrt(3), estimate.mcse, rel_tol=TOLERANCE)
+    assert not math.isclose(math.sqrt(2) / 3, estimate.mcse, rel_tol=TOLERANCE)
+
+
 def test_the_error_of_a_proportion_is_the_published_one():
     """Power .80 from 400 runs has a Monte Carlo error of .02 (Morris, White and Crowther 2019)."""
     values = np.repeat([1.0, 0.0], [320, 80])
