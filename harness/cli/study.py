@@ -11,6 +11,7 @@ from generators.errors import InputError
 from harness.cli.output import complain, examples, print_json, say, shared_options, use_colour, width
 
 if TYPE_CHECKING:
+    from harness.report.answers import Answers
     from harness.studies.running import RunSummary
 
 STUDY = click.argument("study", type=click.Path(path_type=Path))
@@ -105,19 +106,26 @@ def run(plan: Path, ledger: Path | None, workers: int | None, as_json: bool, qui
     return _run_and_report(plan, ledger, workers, None, as_json, quiet)
 
 
-@click.command(epilog=examples("arcassay report plan.toml", "arcassay report plan.ledger -o winter.html"))
+@click.command(
+    epilog=examples(
+        "arcassay report plan.toml", "arcassay report plan.ledger -o winter.html --figures figures"
+    )
+)
 @STUDY
 @LEDGER
 @click.option(
     "-o", "--output", type=click.Path(path_type=Path), help="The page to write; NAME.html if absent."
 )
+@click.option("--figures", type=click.Path(path_type=Path), help="A folder for each figure as an SVG file.")
 @shared_options
-def report(study: Path, ledger: Path | None, output: Path | None, as_json: bool, quiet: bool) -> None:
+def report(
+    study: Path, ledger: Path | None, output: Path | None, figures: Path | None, as_json: bool, quiet: bool
+) -> None:
     """Write the self-contained report of a study, and print its first screen."""
     from harness.studies.reading import find_ledger
 
     found = find_ledger(study, ledger)
-    _report(found, output or found.with_suffix(".html"), as_json, quiet)
+    _report(found, output or found.with_suffix(".html"), as_json, quiet, figures)
 
 
 @click.command(
@@ -232,7 +240,7 @@ def _say_ending(summary: RunSummary, plan: Path, quiet: bool) -> None:
         )
 
 
-def _report(ledger: Path, page: Path | None, as_json: bool, quiet: bool) -> None:
+def _report(ledger: Path, page: Path | None, as_json: bool, quiet: bool, figures: Path | None = None) -> None:
     from generators.files.atomic import atomic_write
     from harness.report.answers import answers_json, build_answers
     from harness.report.page import render_page
@@ -243,6 +251,8 @@ def _report(ledger: Path, page: Path | None, as_json: bool, quiet: bool) -> None
     answers = build_answers(study.runs, study.facts)
     if page is not None:
         atomic_write(page, render_page(answers))
+    if figures is not None:
+        _write_figures(answers, figures, quiet)
     if as_json:
         document: dict[str, Any] = answers_json(answers)
         print_json(document if page is None else {**document, "page": str(page)})
@@ -252,3 +262,19 @@ def _report(ledger: Path, page: Path | None, as_json: bool, quiet: bool) -> None
         say(f"\nThe whole report: arcassay report {ledger}", quiet=quiet)
     else:
         say(f"\nThe report: {page}", quiet=quiet)
+
+
+def _write_figures(answers: Answers, folder: Path, quiet: bool) -> None:
+    from generators.files.atomic import atomic_write
+    from harness.report.figures import figure_file
+
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise InputError(f"{folder}: the folder cannot be made ({error.strerror})") from None
+    drawn = [figure for condition in answers.conditions for figure in condition.figures] + list(
+        answers.figures
+    )
+    for figure in drawn:
+        atomic_write(folder / f"{figure.key}.svg", figure_file(figure))
+    say(f"Wrote {len(drawn)} figures to {folder}.", quiet=quiet)

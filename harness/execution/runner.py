@@ -60,6 +60,7 @@ def fork_runner(main: Callable[[Connection], None], connection: Connection, outp
         signal.signal(signal.SIGTERM, signal.SIG_DFL)
         signal.signal(signal.SIGINT, signal.SIG_IGN)
         os.chdir(folder)
+        _offer_itself_first()
         _keep_only(connection.fileno(), output)
         main(Connection(_CONNECTION_FILE))
         code = 0
@@ -204,6 +205,14 @@ def _draw(connection: Connection, source: MaterialSource, work: Work) -> Materia
 
 def _send(connection: Connection, **fields: Any) -> None:
     connection.send_bytes(canonical_json(fields).encode("ascii"))
+
+
+def _offer_itself_first() -> None:
+    """When memory runs out, the system is to end this process, not those that watch and write."""
+    with contextlib.suppress(OSError), open("/proc/self/oom_score_adj", "w") as file:
+        file.write("1000")
+    with contextlib.suppress(OSError, ValueError):  # and a crash is to leave no image of the memory behind
+        resource.setrlimit(resource.RLIMIT_CORE, (0, resource.getrlimit(resource.RLIMIT_CORE)[1]))
 
 
 def _keep_only(connection: int, output: int) -> None:

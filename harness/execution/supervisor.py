@@ -325,7 +325,8 @@ class Supervisor:
 
     def _tail(self, runner: _Runner) -> str:
         size = os.fstat(runner.output).st_size
-        text = os.pread(runner.output, TAIL_BYTES, max(0, size - TAIL_BYTES)).decode(errors="replace").strip()
+        text = os.pread(runner.output, TAIL_BYTES, max(0, size - TAIL_BYTES)).decode(errors="replace")
+        text = text.replace("\0", "?").strip()
         return f"\n{text}" if text else ""
 
 

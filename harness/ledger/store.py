@@ -377,14 +377,15 @@ class Ledger:
             row = self._execute(
                 "SELECT id, text, expansion FROM plan ORDER BY last_started DESC, id DESC LIMIT 1"
             ).fetchone()
-        return None if row is None else (int(row[0]), str(row[1]), json.loads(row[2]))
+            return None if row is None else (int(row[0]), str(row[1]), json.loads(row[2]))
 
     def sessions(self) -> list[dict[str, Any]]:
         """Return all sessions, oldest first."""
         with naming(self.path):
             cursor = self._execute("SELECT * FROM session ORDER BY id")
-            sessions = [dict(zip([c[0] for c in cursor.description], row, strict=True)) for row in cursor]
-        return [{**session, "versions": json.loads(session["versions"])} for session in sessions]
+            names = [column[0] for column in cursor.description]
+            sessions = [dict(zip(names, row, strict=True)) for row in cursor]
+            return [{**session, "versions": json.loads(session["versions"])} for session in sessions]
 
     def run_rows(self) -> list[dict[str, Any]]:
         """Return every run with its keys, measures and network, as plain dictionaries."""

@@ -24,8 +24,8 @@ from harness.report.evidence import (
     measures_table,
     undefined_table,
 )
-from harness.report.facts import StudyFacts
 from harness.report.tables import Column, Table, plain, table_json
+from harness.studies.facts import StudyFacts
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +86,7 @@ class Answers:
         Across conditions.
     failures : Table
     trust : tuple of Table
-        Learners, conditions, sessions, audits.
+        Learners, conditions, measures, sessions.
     plan_text : str
     """
 
@@ -320,8 +320,7 @@ def _trust(facts: StudyFacts, measures: Sequence[str]) -> tuple[Table, ...]:
         tuple(_session(session) for session in facts.sessions),
         (f"Seed {facts.seed}. Every network, dataset and random learner follows from it and the plan.",),
     )
-    audits = [facts.audits] if facts.audits is not None else []
-    return (learners, conditions, *audits, measures_glossary(measures), sessions)
+    return (learners, conditions, measures_glossary(measures), sessions)
 
 
 def _session(session: Mapping[str, Any]) -> tuple[str, ...]:

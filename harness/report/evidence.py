@@ -11,9 +11,9 @@ from harness.analysis.curves import Curve, measure_curves, runtime_curves, share
 from harness.analysis.means import Summary
 from harness.records import Status
 from harness.report import sentences
-from harness.report.facts import StudyFacts
 from harness.report.tables import Column, Table, Value, count_of, decimals_for, joined, on_one_line
 from harness.scorers.registry import MEASURES
+from harness.studies.facts import StudyFacts
 
 if TYPE_CHECKING:
     import pandas as pd

@@ -103,6 +103,24 @@ def draw(figure: FigureFacts) -> str:
     return _fit_for_page(out.getvalue(), figure, salt)
 
 
+def figure_file(figure: FigureFacts) -> str:
+    """Return a figure as an SVG file of its own: with a white ground, and a font for its text.
+
+    Parameters
+    ----------
+    figure : FigureFacts
+
+    Returns
+    -------
+    str
+    """
+    opening, _, rest = draw(figure).partition(">")
+    alone = 'xmlns="http://www.w3.org/2000/svg" font-family="sans-serif" color="#1a1a1a"'
+    ground = '<rect width="100%" height="100%" fill="#ffffff" />'
+    head, desc, body = rest.partition("</desc>")
+    return f"{opening.replace('<svg', f'<svg {alone}', 1)}>{head}{desc}\n{ground}{body}\n"
+
+
 def _series(figure: FigureFacts) -> list[_Series]:
     """Return what can be drawn of each curve; a time over the limit stands at the longest time seen."""
     styles = [_Style(*style) for style in zip(COLOURS, MARKERS, DASHES, strict=True)]

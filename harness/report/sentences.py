@@ -9,8 +9,8 @@ from harness.analysis.assurance import GridAnswer, MetShare
 from harness.analysis.intervals import least_n_to_show
 from harness.analysis.means import Summary
 from harness.records import Condition, Learner, Requirement
-from harness.report.facts import StudyFacts
 from harness.report.tables import Column, count_of, fixed, joined, plural, seconds_text, value_text
+from harness.studies.facts import StudyFacts
 
 NO_SEARCH = (
     "These are readings at the plan's row counts, each interval for itself. What holds between two row "

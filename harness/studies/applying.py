@@ -18,7 +18,7 @@ from harness.learners.specification import Specification, call, specification_of
 from harness.plan.expansion import n_variables
 from harness.plan.recipes import given_network
 from harness.records import Condition, Learner
-from harness.report.facts import StudyFacts
+from harness.studies.facts import StudyFacts
 
 if TYPE_CHECKING:
     import pandas as pd

@@ -14,7 +14,7 @@ from harness.analysis.runs import Runs
 from harness.ledger.store import MEASURE_COLUMNS, Ledger, named_edges
 from harness.plan.recipes import dataset_key
 from harness.records import Bound, Condition, Learner, Limits, Requirement, Status
-from harness.report.facts import StudyFacts
+from harness.studies.facts import StudyFacts
 from harness.studies.running import LEDGER_ENDING, ledger_path
 
 if TYPE_CHECKING:

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from typing import Any
 
 from harness.records import Condition, Learner, Requirement
-from harness.report.tables import Table
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,8 +31,6 @@ class StudyFacts:
     plan_text : str
     n_other_runs : int
         Runs in the ledger that are not of this plan, and are left out.
-    audits : Table or None
-        What audits of the truth and the data found.
     """
 
     title: str
@@ -47,7 +44,6 @@ class StudyFacts:
     n_done_runs: int
     plan_text: str
     n_other_runs: int = 0
-    audits: Table | None = None
 
     @property
     def confidence(self) -> float:
