@@ -205,6 +205,10 @@ def class_lists(arrow: Arrow) -> ClassLists:
     Parameters
     ----------
     arrow : bool array, shape (p, p), C-contiguous
+
+    Returns
+    -------
+    ClassLists
     """
     at, nodes = neighbour_lists(arrow)
     order, n_ordered = _extension_order(arrow, at, nodes)

@@ -2,8 +2,8 @@
 
 Sets x and y of a DAG are d-separated by z when every path between them is blocked: by a variable of z
 that is no collider on the path, or by a collider that is not in z and has no descendant in z (Pearl
-1988). The search follows active paths only, so its cost is at most proportional to the number of arcs
-(Geiger, Verma and Pearl 1990; Shachter 1998).
+1988). The search goes along active paths only, so its cost is at most proportional to the number of arcs
+(Shachter 1998).
 """
 
 from __future__ import annotations
@@ -132,10 +132,10 @@ def is_connected(
 ) -> bool:
     """Say whether, given some variables of a DAG, an active path joins a source with a target.
 
-    The search visits a variable at most twice: arrived at from a child (as if, for a source), from where
-    the path may go on to parents and children unless the variable is given; and arrived at from a
-    parent, from where it may go on to children unless the variable is given, and back up to other
-    parents if the variable or a descendant of it is given.
+    Shachter (1998). A variable is visited at most twice. Arrived at from a child (or as a source), the
+    search goes on to parents and children unless the variable is given. Arrived at from a parent, it goes
+    on to children, or, if the variable is given, back up to all its parents: that is also how it passes
+    a collider with a given descendant, down to that descendant and up again.
 
     Parameters
     ----------
@@ -152,7 +152,6 @@ def is_connected(
     is_given = np.zeros(p, np.bool_)
     for v in given:
         is_given[v] = True
-    leads_to_given = reach(at, nodes, given, PARENTS)
     is_visited = np.zeros(2 * p, np.bool_)  # at 2 v: from a child, at 2 v + 1: from a parent
     stack = np.empty(2 * p, np.uint32)
     n = 0
@@ -163,7 +162,7 @@ def is_connected(
     while n > 0:
         n -= 1
         v = stack[n] >> 1
-        is_from_parent = stack[n] & 1
+        is_from_parent = stack[n] & 1 == 1
         if not is_given[v]:
             if is_target[v]:
                 return True
@@ -172,7 +171,7 @@ def is_connected(
                     is_visited[2 * child + 1] = True
                     stack[n] = 2 * child + 1
                     n += 1
-        if leads_to_given[v] if is_from_parent else not is_given[v]:
+        if is_given[v] == is_from_parent:
             for parent in nodes[at[3 * v] : at[3 * v + 1]]:
                 if not is_visited[2 * parent]:
                     is_visited[2 * parent] = True

@@ -339,36 +339,38 @@ def tabulate_planes(columns: Columns, variable: int, n_planes: int, space: Works
     r = columns.offsets[variable + 1] - first
     if r == 0:
         return False
-    count_within(columns.planes[first : first + r], space.base, space.base_sizes, n_planes, space.table)
+    count_within(columns.planes, first, r, space.base, space.base_sizes, n_planes, space.table)
     return True
 
 
 @inlined
 def count_within(
     planes: NDArray[np.uint64],
+    first: int,
+    r: int,
     base: NDArray[np.uint64],
     base_sizes: NDArray[np.uint32],
     n_planes: int,
     table: NDArray[np.uint32],
 ) -> None:
-    """Do the work of `tabulate_planes`, without tuples of arrays: for the innermost loops.
+    """Do the work of `tabulate_planes`, for the innermost loops.
 
-    A compiled function that is handed a tuple of arrays counts the references to each of them, which
-    costs as much as counting a few hundred rows.
+    It takes no tuples of arrays: a compiled function that is handed one counts the references to each
+    array in it, which takes as long as counting some hundred rows.
 
     Parameters
     ----------
-    planes : uint64 array, shape (r, ceil(n / 64)), C-contiguous
-        Of the variable to count.
+    planes : uint64 array, shape (any, ceil(n / 64))
+        Rows `first` to ``first + r - 1`` belong to the variable to count.
+    first, r : int
     base, base_sizes, n_planes
         As in `split_planes`, `tabulate_planes`.
     table : uint32 array, shape (at least n_planes * r,)
         Filled: cell ``c * r + s``.
     """
-    r = planes.shape[0]
     _clear(table, n_planes * r)
     for s in range(r - 1):
-        _add_overlaps(base, n_planes, planes[s], table[s:], r)
+        _add_overlaps(base, n_planes, planes, first + s, np.int64(0), planes.shape[1], table, s, r)
     for c in range(n_planes):
         rest = base_sizes[c]
         for s in range(r - 1):
@@ -378,10 +380,19 @@ def count_within(
 
 @inlined
 def _add_overlaps(
-    base: NDArray[np.uint64], n_parts: int, plane: NDArray[np.uint64], sums: NDArray[Any], stride: int
+    base: NDArray[np.uint64],
+    n_parts: int,
+    planes: NDArray[np.uint64],
+    row: int,
+    start: int | np.int64,
+    end: int,
+    table: NDArray[Any],
+    at: int,
+    stride: int,
 ) -> None:
-    # Adds the rows that part c of the base shares with the plane to sums[c * stride]. Four parts at a
-    # time use each word of the plane four times.
+    # Adds the rows that part c of the base shares with words `start` to `end` of a plane to
+    # table[at + c * stride]. Four parts at a time use each word of the plane four times.
+    plane, sums = planes[row, start:end], table[at:]
     fours = n_parts // 4 * 4
     for c in range(0, fours, 4):
         p0, p1, p2, p3 = base[c], base[c + 1], base[c + 2], base[c + 3]
@@ -718,7 +729,7 @@ def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray
                 _split_parts(base, n_parts, columns.planes, first, r, start, end)
             else:
                 for s in range(r):
-                    _add_overlaps(base, n_parts, columns.planes[first + s, start:end], table[s:], r)
+                    _add_overlaps(base, n_parts, columns.planes, first + s, start, end, table, s, r)
             n_parts *= r
 
 

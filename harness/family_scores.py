@@ -298,10 +298,38 @@ def score_table(
         Nominal joint states of all parents, the added one included.
     rule : Scoring
     """
+    terms, shifts, penalty, ess, memo, divisors = rule
+    return score_counts(table, n_parts, r, r_added, q, terms, shifts, penalty, ess, memo, divisors)
+
+
+@inlined
+def score_counts(
+    table: NDArray[np.uint32],
+    n_parts: int,
+    r: int,
+    r_added: int | np.int64,
+    q: float,
+    terms: NDArray[np.float64],
+    shifts: bool,
+    penalty: float,
+    ess: float,
+    memo: NDArray[np.float64],
+    divisors: NDArray[np.float64],
+) -> float:
+    """Do the work of `score_table`, for the innermost loops: see `harness.counts.count_within`.
+
+    Parameters
+    ----------
+    table, n_parts, r, r_added, q
+        As in `score_table`.
+    terms, shifts, penalty, ess, memo, divisors
+        As in `Scoring`.
+    """
     total = 0.0
-    if rule.ess > 0.0:
-        of_cells = _remembered(rule, 0, q * r)
-        of_margins = _remembered(rule, 1, q)
+    if ess > 0.0:
+        a, b = ess / (q * r), ess / q
+        of_cells = _remembered(memo[0], divisors[0], ess, q * r)
+        of_margins = _remembered(memo[1], divisors[1], ess, q)
         for c in range(n_parts):
             part = table[c * r * r_added : (c + 1) * r * r_added]
             for x in range(r_added):
@@ -309,11 +337,10 @@ def score_table(
                 for k in range(r):
                     rows = part[k * r_added + x]
                     margin += rows
-                    total += _log_rise(of_cells, rule.ess / (q * r), rows)
-                total -= _log_rise(of_margins, rule.ess / q, margin)
+                    total += _log_rise(of_cells, a, rows)
+                total -= _log_rise(of_margins, b, margin)
         return total
-    terms = rule.terms
-    shift = np.uint32(r - 1 if rule.shifts else 0)
+    shift = np.uint32(r - 1 if shifts else 0)
     for c in range(n_parts):
         part = table[c * r * r_added : (c + 1) * r * r_added]
         for x in range(r_added):
@@ -323,7 +350,7 @@ def score_table(
                 margin += rows
                 total += terms[rows]
             total -= terms[margin + shift] - terms[shift]
-    return total - rule.penalty * (r - 1) * q
+    return total - penalty * (r - 1) * q
 
 
 @inlined
@@ -351,7 +378,7 @@ def score_occurring(
         part = 0.0
         if rule.ess > 0.0:
             divisor = q if side else q * r
-            remembered = _remembered(rule, side, divisor)
+            remembered = _remembered(rule.memo[side], rule.divisors[side], rule.ess, divisor)
             for c in range(n_parts):
                 part += _log_rise(remembered, rule.ess / divisor, space.table[c])
         else:
@@ -363,16 +390,18 @@ def score_occurring(
 
 
 @inlined
-def _remembered(rule: Scoring, side: int, divisor: float) -> NDArray[np.float64]:
+def _remembered(
+    memo: NDArray[np.float64], divisors: NDArray[np.float64], ess: float, divisor: float
+) -> NDArray[np.float64]:
     # The row of the memo for this divisor; one that held another divisor's terms is cleared.
     hashed = np.uint64(min(divisor, 1e18)) * np.uint64(HASH_FACTOR)
     slot = hashed >> np.uint64(58)
-    row: NDArray[np.float64] = rule.memo[side, slot]
-    if rule.divisors[side, slot] != divisor:
-        rule.divisors[side, slot] = divisor
+    row: NDArray[np.float64] = memo[slot]
+    if divisors[slot] != divisor:
+        divisors[slot] = divisor
         for m in range(row.shape[0]):
             row[m] = np.nan
-        row[0] = _log_gamma(rule.ess / divisor)
+        row[0] = _log_gamma(ess / divisor)
     return row
 
 

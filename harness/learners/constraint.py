@@ -44,7 +44,7 @@ from harness.independence import (
 from harness.learners.specification import learner
 
 DECIMALS = 6  # to which statistics are compared when they are ordered
-MIN_SHARING = 3  # sets that must share a bound for it to be worth its cost; measured
+MIN_SHARING = 2  # sets that must share a bound for it to be worth its cost; measured
 
 
 @learner(
@@ -282,6 +282,7 @@ def _separate(
             continue
         for j in range(n_given):
             chosen[j] = j
+        is_new_base = True
         changed = 0
         while n_left > 0 and changed >= 0:
             # Where the first of the given variables alone make too many cells for any partner, which has
@@ -295,8 +296,9 @@ def _separate(
                     break
             if 2 * cells > max_cells:
                 changed = _next_combination(chosen, last, neighbours.shape[0])
+                is_new_base |= changed < n_given - 1
                 continue
-            if changed < n_given - 1 and not is_pearson:
+            if is_new_base and not is_pearson:
                 _find_gains(columns, statistics, given[:-1], x, neighbours, chosen, work, gains)
             work.parts[:] = 0
             is_given[given] = True
@@ -323,6 +325,7 @@ def _separate(
                     n_left -= 1
             is_given[given] = False
             changed = _next_combination(chosen, n_given - 1, neighbours.shape[0])
+            is_new_base = changed < n_given - 1
     return pairs[:n_separated].copy(), separators[:n_separated].copy(), is_any_made
 
 

@@ -28,7 +28,6 @@ from generators.graph import Graph
 from generators.settings import Between
 from generators.topologies.random_order import draw_along_random_order
 from harness.counts import (
-    MAX_PLANE_CELLS,
     WORD_ROWS,
     Columns,
     Workspace,
@@ -46,6 +45,7 @@ from harness.family_scores import (
     Score,
     Scoring,
     joint_states,
+    score_counts,
     score_family,
     score_occurring,
     score_table,
@@ -56,6 +56,7 @@ from harness.records import Declined
 
 MAX_MEGABYTES = 1024
 START_MEAN_PARENTS = 1.0
+MAX_OVERLAPS = 96  # tables with more cells to count on planes are counted by index
 NONE, ADD, DELETE, REVERSE = range(4)
 
 
@@ -444,33 +445,38 @@ def _score_additions(
     # Fills gains[x] for x = first, ..., p - 1 that are neither y nor its parents, and returns the score
     # of y with its parents alone. Tables are counted on planes while they are small, by index while they
     # fit, and from the joint states that occur beyond; the index is made when it is first needed.
+    planes, offsets, cardinalities = columns.planes, columns.offsets, columns.cardinalities
+    base, base_sizes, table = space.base, space.base_sizes, space.table
+    terms, shifts, penalty, ess, memo, divisors = rule
     q = joint_states(columns, parents)
-    r = columns.cardinalities[y]
+    r = cardinalities[y]
     n_planes = split_planes(columns, parents, y, space) * r
+    if n_planes > 0:
+        own = score_table(base_sizes, n_planes // r, r, np.int64(1), q, rule)
+    else:
+        own = score_family(columns, parents, y, rule, space)
     n_numbers = 0
     is_indexed = False
-    own = score_family(columns, parents, y, rule, space)
-    for x in range(first, columns.codes.shape[0]):
+    for x in range(first, cardinalities.shape[0]):
         if x == y or is_parent[x]:
             continue
-        r_added = columns.cardinalities[x]
+        at, r_added = offsets[x], cardinalities[x]
         q_added = min(q * r_added, MAX_JOINT_STATES)
-        at = columns.offsets[x]
-        if columns.offsets[x + 1] > at and 0 < n_planes * r_added <= MAX_PLANE_CELLS:
-            count_within(
-                columns.planes[at : at + r_added], space.base, space.base_sizes, n_planes, space.table
+        if offsets[x + 1] > at and 0 < n_planes * (r_added - 1) <= MAX_OVERLAPS:
+            count_within(planes, at, r_added, base, base_sizes, n_planes, table)
+            gains[x] = -own + score_counts(
+                table, n_planes // r, r, r_added, q_added, terms, shifts, penalty, ess, memo, divisors
             )
-            gains[x] = score_table(space.table, n_planes // r, r, r_added, q_added, rule) - own
             continue
         if n_numbers == 0:
             n_numbers = index_rows(columns, parents, space) * r
-        if n_numbers * r_added <= space.table.shape[0]:
+        if n_numbers * r_added <= table.shape[0]:
             if not is_indexed:
                 index_rows(columns, parents, space)
                 append_column(columns, y, space)
                 is_indexed = True
             tabulate_index(columns, x, n_numbers, space)
-            gains[x] = score_table(space.table, n_numbers // r, r, r_added, q_added, rule) - own
+            gains[x] = score_table(table, n_numbers // r, r, r_added, q_added, rule) - own
         else:
             family = np.empty(parents.shape[0] + 2, dtype=np.int64)
             family[0], family[1] = y, x

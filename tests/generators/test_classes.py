@@ -337,6 +337,72 @@ def test_each_meek_rule_directs_its_own_pattern(
     assert expected == maximally_oriented(Graph.from_edges(names, directed, undirected))
 
 
+def test_rule_4_needs_the_middle_variable_to_be_adjacent() -> None:
+    """Without an edge a - d, the arrow d -> b directs b -> a, by rule 1."""
+    graph = Graph.from_edges("abcd", [("c", "d"), ("d", "b")], [("a", "b"), ("a", "c")])
+
+    assert maximally_oriented(graph).parents("a") == ("b",)
+
+
+def some_rule_applies(graph: Graph) -> bool:
+    """Say whether one of Meek's rules, read off the paper, directs an undirected edge."""
+    names = range(graph.n_variables)
+    to, free, joined = graph.directed, graph.undirected, graph.skeleton
+    return any(
+        any((to[c, a] and not joined[c, b]) or (to[a, c] and to[c, b]) for c in names)
+        or any(
+            c != d
+            and free[a, c]
+            and to[d, b]
+            and (
+                (to[c, b] and free[a, d] and not joined[c, d])
+                or (to[c, d] and joined[a, d] and not joined[c, b])
+            )
+            for c in names
+            for d in names
+        )
+        for a, b in np.argwhere(free).tolist()
+    )
+
+
+def test_no_meek_rule_applies_afterwards(rng: np.random.Generator) -> None:
+    """On any partly directed graph, contradictory ones too, the rules are worked off to the end."""
+    n_directed = 0
+    for _ in range(400):
+        arrow = rng.random((7, 7)) < 0.6
+        arrow |= arrow.T & (rng.random((7, 7)) < 0.3)
+        np.fill_diagonal(arrow, False)
+        graph = Graph(tuple(NAMES[:7]), arrow)
+
+        found = maximally_oriented(graph)
+
+        assert not some_rule_applies(found)
+        assert np.array_equal(graph.skeleton, found.skeleton)
+        assert not (graph.directed & ~found.directed).any()
+        n_directed += int(found.directed.sum() - graph.directed.sum())
+
+    assert n_directed > 400
+
+
+def test_rule_4_is_tried_again_when_its_first_arrow_comes_last() -> None:
+    """A contradictory graph, found by search, in which c -> d of rule 4 is directed after d -> b was used."""
+    arrow = np.array(
+        [
+            [0, 1, 0, 1, 1, 1],
+            [1, 0, 0, 0, 1, 0],
+            [0, 0, 0, 1, 1, 0],
+            [1, 1, 1, 0, 0, 1],
+            [1, 0, 1, 1, 0, 1],
+            [1, 0, 1, 1, 1, 0],
+        ],
+        dtype=bool,
+    )
+
+    found = maximally_oriented(Graph(tuple(NAMES[:6]), arrow))
+
+    assert not some_rule_applies(found)
+
+
 @pytest.mark.parametrize(("p", "density"), [(30, 0.1), (130, 0.02), (60, 0.3)])
 def test_meek_rules_agree_with_edge_labelling_on_larger_graphs(
     rng: np.random.Generator, p: int, density: float

@@ -664,7 +664,7 @@ def test_same_draw_is_stored_once(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("differing", [{"cpts": "another"}, {"view": "another"}])
 def test_a_different_redraw_stops_with_both_versions(tmp_path: Path, differing: dict[str, str]) -> None:
-    """When numpy draws differently than at the ledger's beginning, both versions are named, nothing changes."""
+    """When numpy draws otherwise than at the ledger's beginning, both versions are named; nothing changes."""
     path = tmp_path / "a.ledger"
     filled(path, 2)
     before = contents(tmp_path)
