@@ -339,7 +339,18 @@ def tabulate_planes(columns: Columns, variable: int, n_planes: int, space: Works
     r = columns.offsets[variable + 1] - first
     if r == 0:
         return False
-    count_within(columns.planes, first, r, space.base, space.base_sizes, n_planes, space.table)
+    _clear(space.table, n_planes * r)
+    count_within(
+        columns.planes,
+        first,
+        r,
+        0,
+        columns.planes.shape[1],
+        space.base,
+        space.base_sizes,
+        n_planes,
+        space.table,
+    )
     return True
 
 
@@ -348,71 +359,62 @@ def count_within(
     planes: NDArray[np.uint64],
     first: int,
     r: int,
+    start: int,
+    end: int,
     base: NDArray[np.uint64],
-    base_sizes: NDArray[np.uint32],
-    n_planes: int,
-    table: NDArray[np.uint32],
+    sizes: NDArray[np.uint32],
+    n_parts: int,
+    table: NDArray[Any],
 ) -> None:
-    """Do the work of `tabulate_planes`, for the innermost loops.
+    """Add the rows of a variable within each plane of a base to a table: for the innermost loops.
 
-    It takes no tuples of arrays: a compiled function that is handed one counts the references to each
-    array in it, which takes as long as counting some hundred rows.
+    It takes no tuples of arrays and calls nothing: in other compiled functions the references to every
+    array are counted, which takes as long as counting some hundred rows.
 
     Parameters
     ----------
     planes : uint64 array, shape (any, ceil(n / 64))
         Rows `first` to ``first + r - 1`` belong to the variable to count.
     first, r : int
-    base, base_sizes, n_planes
-        As in `split_planes`, `tabulate_planes`.
-    table : uint32 array, shape (at least n_planes * r,)
-        Filled: cell ``c * r + s``.
+    start, end : int
+        Which words of the planes the base is about.
+    base : uint64 array, shape (at least n_parts, at least end - start)
+    sizes : uint32 array, shape (at least n_parts,)
+        Rows in each plane of the base.
+    n_parts : int
+    table : uint32 or int64 array, shape (at least n_parts * r,)
+        To cell ``c * r + s`` the rows in part c and state s are added.
     """
-    _clear(table, n_planes * r)
-    for s in range(r - 1):
-        _add_overlaps(base, n_planes, planes, first + s, np.int64(0), planes.shape[1], table, s, r)
-    for c in range(n_planes):
-        rest = base_sizes[c]
-        for s in range(r - 1):
-            rest -= table[c * r + s]
-        table[c * r + r - 1] = rest
-
-
-@inlined
-def _add_overlaps(
-    base: NDArray[np.uint64],
-    n_parts: int,
-    planes: NDArray[np.uint64],
-    row: int,
-    start: int | np.int64,
-    end: int,
-    table: NDArray[Any],
-    at: int,
-    stride: int,
-) -> None:
-    # Adds the rows that part c of the base shares with words `start` to `end` of a plane to
-    # table[at + c * stride]. Four parts at a time use each word of the plane four times.
-    plane, sums = planes[row, start:end], table[at:]
+    for c in range(n_parts):
+        table[c * r + r - 1] += sizes[c]
     fours = n_parts // 4 * 4
-    for c in range(0, fours, 4):
-        p0, p1, p2, p3 = base[c], base[c + 1], base[c + 2], base[c + 3]
-        n0, n1, n2, n3 = np.uint64(0), np.uint64(0), np.uint64(0), np.uint64(0)
-        for w in range(plane.shape[0]):
-            word = plane[w]
-            n0 += popcount(p0[w] & word)
-            n1 += popcount(p1[w] & word)
-            n2 += popcount(p2[w] & word)
-            n3 += popcount(p3[w] & word)
-        sums[c * stride] += n0
-        sums[(c + 1) * stride] += n1
-        sums[(c + 2) * stride] += n2
-        sums[(c + 3) * stride] += n3
-    for c in range(fours, n_parts):
-        part = base[c]
-        rows = np.uint64(0)
-        for w in range(plane.shape[0]):
-            rows += popcount(part[w] & plane[w])
-        sums[c * stride] += rows
+    for s in range(r - 1):
+        plane = planes[first + s, start:end]
+        for c in range(0, fours, 4):  # four parts at a time use each word of the plane four times
+            p0, p1, p2, p3 = base[c], base[c + 1], base[c + 2], base[c + 3]
+            n0, n1, n2, n3 = np.uint64(0), np.uint64(0), np.uint64(0), np.uint64(0)
+            for w in range(plane.shape[0]):
+                word = plane[w]
+                n0 += popcount(p0[w] & word)
+                n1 += popcount(p1[w] & word)
+                n2 += popcount(p2[w] & word)
+                n3 += popcount(p3[w] & word)
+            cells = table[c * r : (c + 4) * r]
+            cells[s] += n0
+            cells[r - 1] -= n0
+            cells[r + s] += n1
+            cells[r + r - 1] -= n1
+            cells[2 * r + s] += n2
+            cells[2 * r + r - 1] -= n2
+            cells[3 * r + s] += n3
+            cells[3 * r + r - 1] -= n3
+        for c in range(fours, n_parts):
+            part = base[c]
+            rows = np.uint64(0)
+            for w in range(plane.shape[0]):
+                rows += popcount(part[w] & plane[w])
+            table[c * r + s] += rows
+            table[c * r + r - 1] -= rows
 
 
 @inlined
@@ -716,6 +718,7 @@ def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray
     n_words = columns.planes.shape[1]
     r_last = columns.cardinalities[variables[last]]
     base = np.empty((table.shape[0] // r_last, min(n_words, BLOCK_WORDS)), dtype=np.uint64)
+    sizes = np.empty(base.shape[0], dtype=np.uint32)
     for start in range(0, n_words, BLOCK_WORDS):
         end = min(n_words, start + BLOCK_WORDS)
         n_parts = 1
@@ -728,8 +731,9 @@ def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray
             elif j < last:
                 _split_parts(base, n_parts, columns.planes, first, r, start, end)
             else:
-                for s in range(r):
-                    _add_overlaps(base, n_parts, columns.planes, first + s, start, end, table, s, r)
+                for c in range(n_parts):
+                    sizes[c] = plane_size(base[c, : end - start])
+                count_within(columns.planes, first, r, start, end, base, sizes, n_parts, table)
             n_parts *= r
 
 

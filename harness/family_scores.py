@@ -298,49 +298,26 @@ def score_table(
         Nominal joint states of all parents, the added one included.
     rule : Scoring
     """
-    terms, shifts, penalty, ess, memo, divisors = rule
-    return score_counts(table, n_parts, r, r_added, q, terms, shifts, penalty, ess, memo, divisors)
+    if rule.ess > 0.0:
+        of_cells = remembered(rule.memo[0], rule.divisors[0], rule.ess, q * r)
+        of_margins = remembered(rule.memo[1], rule.divisors[1], rule.ess, q)
+        return sum_rises(table, n_parts, r, r_added, of_cells, rule.ess / (q * r), of_margins, rule.ess / q)
+    shift = r - 1 if rule.shifts else 0
+    return sum_terms(table, n_parts, r, r_added, rule.terms, shift) - rule.penalty * (r - 1) * q
 
 
 @inlined
-def score_counts(
+def sum_terms(
     table: NDArray[np.uint32],
     n_parts: int,
     r: int,
     r_added: int | np.int64,
-    q: float,
     terms: NDArray[np.float64],
-    shifts: bool,
-    penalty: float,
-    ess: float,
-    memo: NDArray[np.float64],
-    divisors: NDArray[np.float64],
+    shift: int,
 ) -> float:
-    """Do the work of `score_table`, for the innermost loops: see `harness.counts.count_within`.
-
-    Parameters
-    ----------
-    table, n_parts, r, r_added, q
-        As in `score_table`.
-    terms, shifts, penalty, ess, memo, divisors
-        As in `Scoring`.
-    """
+    """Sum the terms of all scores but BDeu: see `score_table`, and `harness.counts.count_within`."""
     total = 0.0
-    if ess > 0.0:
-        a, b = ess / (q * r), ess / q
-        of_cells = _remembered(memo[0], divisors[0], ess, q * r)
-        of_margins = _remembered(memo[1], divisors[1], ess, q)
-        for c in range(n_parts):
-            part = table[c * r * r_added : (c + 1) * r * r_added]
-            for x in range(r_added):
-                margin = np.uint32(0)
-                for k in range(r):
-                    rows = part[k * r_added + x]
-                    margin += rows
-                    total += _log_rise(of_cells, a, rows)
-                total -= _log_rise(of_margins, b, margin)
-        return total
-    shift = np.uint32(r - 1 if shifts else 0)
+    offset = np.uint32(shift)
     for c in range(n_parts):
         part = table[c * r * r_added : (c + 1) * r * r_added]
         for x in range(r_added):
@@ -349,8 +326,47 @@ def score_counts(
                 rows = part[k * r_added + x]
                 margin += rows
                 total += terms[rows]
-            total -= terms[margin + shift] - terms[shift]
-    return total - penalty * (r - 1) * q
+            total -= terms[margin + offset] - terms[offset]
+    return total
+
+
+@inlined
+def sum_rises(
+    table: NDArray[np.uint32],
+    n_parts: int,
+    r: int,
+    r_added: int | np.int64,
+    of_cells: NDArray[np.float64],
+    a: float,
+    of_margins: NDArray[np.float64],
+    b: float,
+) -> float:
+    """Sum the terms of BDeu: see `score_table`, and `harness.counts.count_within`.
+
+    Parameters
+    ----------
+    table, n_parts, r, r_added
+        As in `score_table`.
+    of_cells, of_margins : float64 arrays
+        From `remembered`.
+    a, b : float
+        The priors of a cell and of a margin.
+    """
+    total = 0.0
+    for c in range(n_parts):
+        part = table[c * r * r_added : (c + 1) * r * r_added]
+        for x in range(r_added):
+            margin = np.uint32(0)
+            for k in range(r):
+                rows = part[k * r_added + x]
+                margin += rows
+                if rows > 0:
+                    term = of_cells[rows] if rows < of_cells.shape[0] else np.nan
+                    total += _log_rise(of_cells, a, rows) if math.isnan(term) else term
+            if margin > 0:
+                term = of_margins[margin] if margin < of_margins.shape[0] else np.nan
+                total -= _log_rise(of_margins, b, margin) if math.isnan(term) else term
+    return total
 
 
 @inlined
@@ -378,9 +394,9 @@ def score_occurring(
         part = 0.0
         if rule.ess > 0.0:
             divisor = q if side else q * r
-            remembered = _remembered(rule.memo[side], rule.divisors[side], rule.ess, divisor)
+            log_gamma_prior = _log_gamma(rule.ess / divisor)
             for c in range(n_parts):
-                part += _log_rise(remembered, rule.ess / divisor, space.table[c])
+                part += _log_gamma(space.table[c] + rule.ess / divisor) - log_gamma_prior
         else:
             start = shift if side else np.uint32(0)
             for c in range(n_parts):
@@ -390,10 +406,13 @@ def score_occurring(
 
 
 @inlined
-def _remembered(
+def remembered(
     memo: NDArray[np.float64], divisors: NDArray[np.float64], ess: float, divisor: float
 ) -> NDArray[np.float64]:
-    # The row of the memo for this divisor; one that held another divisor's terms is cleared.
+    """Return the row of a memo that remembers the terms of one divisor of ess.
+
+    A row that held the terms of another divisor is cleared.
+    """
     hashed = np.uint64(min(divisor, 1e18)) * np.uint64(HASH_FACTOR)
     slot = hashed >> np.uint64(58)
     row: NDArray[np.float64] = memo[slot]
@@ -406,17 +425,12 @@ def _remembered(
 
 
 @inlined
-def _log_rise(remembered: NDArray[np.float64], a: float, m: np.uint32) -> float:
-    # log(G(m + a) / G(a))
-    if m == 0:
-        return 0.0
-    if m >= remembered.shape[0]:
-        return float(_log_gamma(m + a) - remembered[0])
-    term: float = remembered[m]
-    if math.isnan(term):
-        term = _log_gamma(m + a) - remembered[0]
-        remembered[m] = term
-    return term
+def _log_rise(terms: NDArray[np.float64], a: float, m: np.uint32) -> float:
+    # log(G(m + a) / G(a)), computed and, where there is room, remembered.
+    term = _log_gamma(m + a) - terms[0]
+    if m < terms.shape[0]:
+        terms[m] = term
+    return float(term)
 
 
 @inlined

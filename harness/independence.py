@@ -315,7 +315,7 @@ def statistic_given(columns: Columns, x: int, y: int, given: Sequence[int], test
     10.0
     """
     variables = np.array(given, dtype=np.int64)
-    return _statistic_given(columns, variables, x, y, statistic_workspace(columns), test == "pearson")
+    return float(_statistic_given(columns, variables, x, y, statistic_workspace(columns), test == "pearson"))
 
 
 # What learners compile into their loops ---------------------------------------------------------------
@@ -498,6 +498,7 @@ def _statistic_by_row(
 def _statistic_given(
     columns: Columns, given: NDArray[np.int64], x: int, y: int, work: StatisticWorkspace, is_pearson: bool
 ) -> float:
+    work.parts[:] = 0
     return conditional_statistic(columns, given, x, y, work, is_pearson)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import secrets
 import shutil
 import socket
 import subprocess
@@ -36,7 +37,7 @@ _START = """
 import sys
 sys.path.insert(0, sys.argv[1])
 from harness.execution.supervisor import main
-main(int(sys.argv[2]), int(sys.argv[3]), sys.argv[4])
+main(int(sys.argv[2]), int(sys.argv[3]))
 """
 WORK_AHEAD = 2  # pieces of work per worker, so that none waits for the main process
 MAX_BATCH = 200  # events handed back at once: what one commit of the ledger holds
@@ -53,8 +54,8 @@ class _Worker:
     process: subprocess.Popen[bytes]
     connection: Connection
     errors: IO[bytes]
-    folder: Path
-    is_ready: bool = False
+    mark: str
+    folder: str | None = None  # known once it is ready
     is_over: bool = False
     open_work: dict[int, Work] = field(default_factory=dict)
     ended: dict[int, set[int]] = field(default_factory=dict)
@@ -87,23 +88,17 @@ class LocalEngine:
         self._deaths = 0
         self._was_ready = False
         self._fault: InputError | None = None
-        self._folder = Path()
 
     def __enter__(self) -> LocalEngine:
-        try:
-            self._folder = Path(tempfile.mkdtemp(prefix="arcassay-"))
-        except OSError as error:
-            raise MachineStop(f"no folder for temporary files can be made ({error.strerror})") from error
         return self
 
     def __exit__(self, *_: object) -> None:
         for worker in self._workers:
             worker.connection.close()  # a supervisor that loses its main process ends its runners
-            if not worker.is_ready:
+            if worker.folder is None:
                 worker.process.kill()  # it has none yet, and may be compiling for a minute
         for worker in self._workers:
             _clear_away(worker)
-        shutil.rmtree(self._folder, ignore_errors=True)
 
     def stop(self) -> None:
         """Finish what is running, and nothing more."""
@@ -158,7 +153,7 @@ class LocalEngine:
 
     def _hand_out(self, source: Iterator[Work]) -> None:
         for worker in self._workers:
-            while worker.is_ready and not worker.is_over and len(worker.open_work) < WORK_AHEAD:
+            while worker.folder is not None and not worker.is_over and len(worker.open_work) < WORK_AHEAD:
                 work = self._again.popleft() if self._again else next(source, None)
                 if work is None:
                     self._is_exhausted = True
@@ -189,7 +184,7 @@ class LocalEngine:
 
     def _note(self, worker: _Worker, word: str, rest: list[Any], on_ready: Callable[[], None] | None) -> None:
         if word == "ready":
-            worker.is_ready = True
+            worker.folder = rest[0]
             if not self._was_ready:
                 self._was_ready = True
                 # The first has compiled what there was to compile; the others find it in the cache.
@@ -208,7 +203,7 @@ class LocalEngine:
 
     def _tell_to_stop(self) -> None:
         for worker in self._workers:
-            if worker.is_ready and not worker.is_over:
+            if worker.folder is not None and not worker.is_over:
                 with contextlib.suppress(BrokenPipeError):
                     worker.connection.send(None)
             else:
@@ -241,11 +236,11 @@ class LocalEngine:
         arguments = [str(_ROOT), str(theirs.fileno()), str(os.getpid())]
         try:
             errors = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the worker lives
-            folder = Path(tempfile.mkdtemp(dir=self._folder))
+            mark = secrets.token_hex(16)
             threads = dict.fromkeys(THREAD_VARIABLES, str(self._threads))
-            environment = {**os.environ, **threads, MARK: str(folder)}
+            environment = {**os.environ, **threads, MARK: mark}
             process = subprocess.Popen(
-                [sys.executable, "-P", "-c", _START, *arguments, str(folder)],
+                [sys.executable, "-P", "-c", _START, *arguments],
                 stdin=subprocess.DEVNULL,
                 stdout=errors,
                 stderr=errors,
@@ -261,7 +256,7 @@ class LocalEngine:
         # Where this process finds a learner's module, so must that one.
         path = [os.path.abspath(place) for place in sys.path if os.path.exists(place or os.curdir)]
         connection.send((self._learners, path))
-        return _Worker(process, connection, errors, folder)
+        return _Worker(process, connection, errors, mark)
 
 
 def _clear_away(worker: _Worker) -> None:
@@ -270,6 +265,7 @@ def _clear_away(worker: _Worker) -> None:
         worker.process.wait(timeout=END_SECONDS)
     worker.process.kill()
     if worker.process.wait() != 0:
-        end_marked(f"{MARK}={worker.folder}")
-        shutil.rmtree(worker.folder, ignore_errors=True)
+        end_marked(f"{MARK}={worker.mark}")
+        if worker.folder is not None:
+            shutil.rmtree(worker.folder, ignore_errors=True)
     worker.errors.close()

@@ -87,14 +87,11 @@ class Supervisor:
         To the main process.
     learners : tuple of Learner
         All of the plan, in its order.
-    folder : Path
-        Where runners get their working folders; it goes with the supervisor.
     """
 
-    def __init__(self, main: Connection, learners: tuple[Learner, ...], folder: Path) -> None:
+    def __init__(self, main: Connection, learners: tuple[Learner, ...]) -> None:
         self._main = main
         self._learners = learners
-        self._folder = folder
         self._queue: deque[Work] = deque()
         self._stopping = False
         self._steady: _Runner | None = None
@@ -108,11 +105,12 @@ class Supervisor:
         _warm_up()
         gc.collect()
         gc.freeze()  # a runner's collections would copy every page of this
+        self._folder = tempfile.mkdtemp(prefix="arcassay-")  # holds the working folders of runners
 
     def serve(self) -> None:
         """Work until the main process asks to stop or is gone."""
         try:
-            self._main.send(("ready", os.getpid()))
+            self._main.send(("ready", self._folder))
             while not self._stopping:
                 if not self._queue:
                     self._take_message()
@@ -131,8 +129,6 @@ class Supervisor:
             if self._steady is not None:
                 self._end(self._steady)
             shutil.rmtree(self._folder, ignore_errors=True)
-            with contextlib.suppress(OSError):  # the last of several, where the main process cannot
-                self._folder.parent.rmdir()
 
     def _take_message(self) -> None:
         try:
@@ -387,7 +383,7 @@ def _end_in_order(number: int, frame: FrameType | None) -> None:
     raise SystemExit(1)  # so that the main process looks for what is left
 
 
-def main(file: int, parent: int, folder: str) -> None:
+def main(file: int, parent: int) -> None:
     """Serve the main process `parent`, whose connection's other end is the open file `file`."""
     processes.die_with_parent(parent)  # until its own end is looked for: loading may take minutes
     signal.signal(signal.SIGINT, signal.SIG_IGN)
@@ -395,7 +391,7 @@ def main(file: int, parent: int, folder: str) -> None:
     connection = Connection(file)
     learners, path = connection.recv()
     sys.path += [place for place in path if place not in sys.path]
-    supervisor = Supervisor(connection, learners, Path(folder))
+    supervisor = Supervisor(connection, learners)
     processes.adopt_orphans()
     processes.survive_parent()
     supervisor.serve()

@@ -5,24 +5,25 @@
    some k neighbours of y. Who is a neighbour is fixed when a level begins, so the skeleton does not
    depend on the order of the columns. The set that separated a pair is the first found, in an order that
    does not depend on it either: sets of strongly associated neighbours come first (see `find_skeleton`).
-2. *Colliders*. Where x - z - y, x and y are not adjacent, and z is not in the set that separated x and y,
-   the edges are directed x -> z <- y. An edge that two colliders direct against each other is left
-   undirected for the next step.
+2. *Colliders*. Where x - z - y, x and y are not adjacent, and z is not in the set S that separated them,
+   the edges are directed x -> z <- y. Colliders that direct an edge against each other are taken in order
+   of their evidence: conditioning on a collider makes its ends dependent, so the one with the smaller
+   p-value of x and y given S and z comes first, and one that contradicts an earlier one is left out.
 3. *Meek's rules* (`generators.classes.meek_rules`) direct what follows.
 
-So the order of the columns enters only where variables are associated to the same strength, and where
-colliders contradict each other, in what `meek_rules` makes of that.
+So the order of the columns enters only where two values that are compared agree, and where the directed
+edges still contradict each other, in what `meek_rules` makes of that.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Annotated, Literal
+from typing import Annotated, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import chdtrc
 
-from generators.adjacency import Nodes, Offsets, neighbour_lists
+from generators.adjacency import Nodes, neighbour_lists
 from generators.classes import meek_rules
 from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
@@ -33,6 +34,7 @@ from harness.independence import (
     ROUNDING,
     CriticalValues,
     StatisticWorkspace,
+    Test,
     attainable_critical_values,
     conditional_statistic,
     critical_value,
@@ -57,7 +59,7 @@ def pc(
     data: Dataset,
     *,
     alpha: Annotated[float, Between(0, 1, inside=True)] = 0.01,
-    test: Literal["g2", "pearson"] = "g2",
+    test: Test = "g2",
     min_per_cell: Annotated[float, Between(0)] = 0.0,
     max_conditioning: Annotated[int, Between(0)] | None = None,
 ) -> Graph:
@@ -102,35 +104,54 @@ def pc(
     found = find_skeleton(
         columns, alpha=alpha, test=test, min_per_cell=min_per_cell, max_conditioning=max_conditioning
     )
-    arrow = direct_colliders(found.adjacent, find_colliders(found))
+    arrow = found.adjacent.copy()
+    _direct(arrow, find_colliders(columns, found, test))
     meek_rules(arrow)
     return Graph(data.names, arrow)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class Skeleton:
+class Separators(NamedTuple):
+    """What separated each pair of variables that something did; kernels take it as it is.
+
+    Parameters
+    ----------
+    pair : int64 array, shape (m,)
+        x p + y for the pair x < y; ascending. Pairs that are neither adjacent nor listed were separated
+        by nothing: the empty set.
+    start, end : int64 array, shape (m,)
+        Where the separating variables of each pair stand in `variables`.
+    variables : int64 array
+    """
+
+    pair: NDArray[np.int64]
+    start: NDArray[np.int64]
+    end: NDArray[np.int64]
+    variables: NDArray[np.int64]
+
+
+class Skeleton(NamedTuple):
     """Which variables are adjacent, and what separated those that are not.
 
     Parameters
     ----------
     adjacent : bool array, shape (p, p)
         Symmetric.
-    separated : tuple of (pairs, given)
-        One entry per number k = 1, 2, ... of variables conditioned on: ``pairs``, int64 array, shape
-        (m, 2), holds the pairs (x, y), x < y, that some k variables separated, and ``given``, int64
-        array, shape (m, k), those variables, ascending. Pairs listed nowhere and not adjacent are
-        separated by nothing: the empty set.
+    separators : Separators
     """
 
     adjacent: NDArray[np.bool_]
-    separated: tuple[tuple[NDArray[np.int64], NDArray[np.int64]], ...]
+    separators: Separators
+
+    def separator(self, x: int, y: int) -> tuple[int, ...]:
+        """Return the variables that separated two that are not adjacent, in the order they were taken."""
+        return tuple(_separator(self.separators, min(x, y) * len(self.adjacent) + max(x, y)).tolist())
 
 
 def find_skeleton(
     columns: Columns,
     *,
     alpha: float,
-    test: Literal["g2", "pearson"] = "g2",
+    test: Test = "g2",
     min_per_cell: float = 0.0,
     max_conditioning: int | None = None,
 ) -> Skeleton:
@@ -160,9 +181,9 @@ def find_skeleton(
     order = np.argsort(np.round(statistics.sum(axis=1), DECIMALS), kind="stable")
     ceilings = statistic_ceilings(columns, test)
     work = statistic_workspace(columns)
-    separated: list[tuple[NDArray[np.int64], NDArray[np.int64]]] = []
-    while max_conditioning is None or len(separated) < max_conditioning:
-        n_given = len(separated) + 1
+    levels: list[tuple[NDArray[np.int64], NDArray[np.int64]]] = []
+    while max_conditioning is None or len(levels) < max_conditioning:
+        n_given = len(levels) + 1
         critical = attainable_critical_values(
             alpha, columns.cardinalities, n_given, ceilings.max(initial=0.0)
         )
@@ -180,59 +201,54 @@ def find_skeleton(
         )
         if not is_any_made:
             break
-        separated.append((pairs, given))
-    return Skeleton(adjacent, tuple(separated))
+        levels.append((pairs, given))
+    return Skeleton(adjacent, _collect(levels))
 
 
-def find_colliders(skeleton: Skeleton) -> NDArray[np.int64]:
-    """List the unshielded triples whose middle is not in the set that separated its ends.
+def _collect(levels: list[tuple[NDArray[np.int64], NDArray[np.int64]]]) -> Separators:
+    pair, end, variables = [
+        np.concatenate([np.empty(0, dtype=np.int64), *parts])
+        for parts in (
+            [pairs for pairs, _ in levels],
+            [np.full(len(pairs), given.shape[1]) for pairs, given in levels],
+            [given.ravel() for _, given in levels],
+        )
+    ]
+    end = np.cumsum(end)
+    start = np.concatenate([[0], end[:-1]]) if len(end) else end
+    order = np.argsort(pair)
+    return Separators(pair[order], start[order], end[order], variables)
+
+
+def find_colliders(columns: Columns, skeleton: Skeleton, test: Test) -> NDArray[np.int64]:
+    """Find the colliders of a skeleton, the better founded of contradicting ones first.
 
     Parameters
     ----------
+    columns : Columns
     skeleton : Skeleton
+    test : {"g2", "pearson"}
 
     Returns
     -------
     int64 array, shape (m, 3)
-        Rows (x, z, y), x < y, for x -> z <- y.
-
-    Examples
-    --------
-    >>> chain = np.array([[0, 1, 0], [1, 0, 1], [0, 1, 0]], dtype=bool)
-    >>> find_colliders(Skeleton(chain, ())).tolist()
-    [[0, 1, 2]]
-    >>> find_colliders(Skeleton(chain, ((np.array([[0, 2]]), np.array([[1]])),))).tolist()
-    []
+        Rows (x, z, y), x < y, for x -> z <- y: first those whose edges no other collider directs the other
+        way, then the others by the p-value of the test of x and y given what separated them and z. Equal
+        p-values (those of strong dependence are 0) are ordered by the statistic, the larger first, then by
+        column.
     """
-    p = len(skeleton.adjacent)
-    triples = _unshielded_triples(skeleton.adjacent, *neighbour_lists(skeleton.adjacent))
-    weights = np.array([p * p, p, 1])
-    explained = [
-        np.insert(pairs, 1, given[:, j], axis=1) @ weights
-        for pairs, given in skeleton.separated
-        for j in range(given.shape[1])
-    ]
-    return triples[~np.isin(triples @ weights, np.concatenate([np.empty(0, np.int64), *explained]))]
-
-
-def direct_colliders(adjacent: NDArray[np.bool_], colliders: NDArray[np.int64]) -> NDArray[np.bool_]:
-    """Direct the edges of colliders; those directed both ways stay undirected.
-
-    Parameters
-    ----------
-    adjacent : bool array, shape (p, p)
-    colliders : int64 array, shape (m, 3)
-        From `find_colliders`.
-
-    Returns
-    -------
-    bool array, shape (p, p)
-        As in `Graph`.
-    """
-    into = np.zeros_like(adjacent)
+    colliders = _find_colliders(skeleton.adjacent, skeleton.separators)
+    into = np.zeros_like(skeleton.adjacent)
     into[colliders[:, 0], colliders[:, 1]] = True
     into[colliders[:, 2], colliders[:, 1]] = True
-    return adjacent & ~(into.T & ~into)
+    both = into & into.T
+    is_contested = both[colliders[:, 0], colliders[:, 1]] | both[colliders[:, 2], colliders[:, 1]]
+    contested = colliders[is_contested]
+    statistic, df = _collider_statistics(
+        columns, contested, skeleton.separators, statistic_workspace(columns), test == "pearson"
+    )
+    order = np.lexsort((-np.round(statistic, DECIMALS), chdtrc(df, statistic)))
+    return np.concatenate([colliders[~is_contested], contested[order]])
 
 
 def _untestable_pairs(cardinalities: NDArray[np.int64], max_cells: float) -> NDArray[np.bool_]:
@@ -388,22 +404,73 @@ def _next_combination(chosen: NDArray[np.int64], last: int, n: int) -> int:
     return j
 
 
+@inlined
+def _separating(separators: Separators, pair: int) -> NDArray[np.int64]:
+    k = np.searchsorted(separators.pair, pair)
+    if k == separators.pair.shape[0] or separators.pair[k] != pair:
+        return separators.variables[:0]
+    return separators.variables[separators.start[k] : separators.end[k]]
+
+
 @kernel
-def _unshielded_triples(adjacent: NDArray[np.bool_], at: Offsets, nodes: Nodes) -> NDArray[np.int64]:
-    # Rows (x, z, y) with x - z - y, x < y and x, y not adjacent.
-    triples = np.empty((nodes.shape[0], 3), dtype=np.int64)
+def _separator(separators: Separators, pair: int) -> NDArray[np.int64]:
+    return _separating(separators, pair)
+
+
+@kernel
+def _find_colliders(adjacent: NDArray[np.bool_], separators: Separators) -> NDArray[np.int64]:
+    # Rows (x, z, y) with x - z - y, x < y, x and y not adjacent, and z not among what separated them.
+    p = adjacent.shape[0]
+    at, nodes = neighbour_lists(adjacent)
+    colliders = np.empty((nodes.shape[0], 3), dtype=np.int64)
     n = 0
-    for z in range(adjacent.shape[0]):
+    for z in range(p):
         neighbours = nodes[at[3 * z] : at[3 * z + 3]]
         for i in range(neighbours.shape[0]):
             x = neighbours[i]
             for y in neighbours[i + 1 :]:
-                if not adjacent[x, y]:
-                    if n == triples.shape[0]:
-                        triples = np.concatenate((triples, np.empty_like(triples)))
-                    triples[n, 0], triples[n, 1], triples[n, 2] = x, z, y
+                if adjacent[x, y]:
+                    continue
+                is_explained = False
+                for v in _separating(separators, np.int64(x) * p + y):
+                    is_explained |= v == z
+                if not is_explained:
+                    if n == colliders.shape[0]:
+                        colliders = np.concatenate((colliders, np.empty_like(colliders)))
+                    colliders[n, 0], colliders[n, 1], colliders[n, 2] = x, z, y
                     n += 1
-    return triples[:n].copy()
+    return colliders[:n].copy()
+
+
+@kernel
+def _collider_statistics(
+    columns: Columns,
+    colliders: NDArray[np.int64],
+    separators: Separators,
+    work: StatisticWorkspace,
+    is_pearson: bool,
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    # Statistic and degrees of freedom of x and y given what separated them and z.
+    n, p = colliders.shape[0], columns.codes.shape[0]
+    statistics, df = np.empty(n), np.empty(n)
+    for k in range(n):
+        x, z, y = colliders[k]
+        given = np.append(_separating(separators, x * p + y), z)
+        work.parts[:] = 0
+        statistics[k] = conditional_statistic(columns, given, x, y, work, is_pearson)
+        df[k] = (columns.cardinalities[x] - 1) * (columns.cardinalities[y] - 1)
+        for v in given:
+            df[k] *= columns.cardinalities[v]
+    return statistics, df
+
+
+@kernel
+def _direct(arrow: NDArray[np.bool_], colliders: NDArray[np.int64]) -> None:
+    # Directs the edges of the colliders, first come, first served.
+    for k in range(colliders.shape[0]):
+        x, z, y = colliders[k]
+        if arrow[x, z] and arrow[y, z]:
+            arrow[z, x] = arrow[z, y] = False
 
 
 @warm_up

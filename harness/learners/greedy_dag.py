@@ -45,11 +45,13 @@ from harness.family_scores import (
     Score,
     Scoring,
     joint_states,
-    score_counts,
+    remembered,
     score_family,
     score_occurring,
     score_table,
     scoring,
+    sum_rises,
+    sum_terms,
 )
 from harness.learners.specification import learner
 from harness.records import Declined
@@ -446,15 +448,19 @@ def _score_additions(
     # of y with its parents alone. Tables are counted on planes while they are small, by index while they
     # fit, and from the joint states that occur beyond; the index is made when it is first needed.
     planes, offsets, cardinalities = columns.planes, columns.offsets, columns.cardinalities
-    base, base_sizes, table = space.base, space.base_sizes, space.table
-    terms, shifts, penalty, ess, memo, divisors = rule
+    base, base_sizes, table, plane_sizes = space.base, space.base_sizes, space.table, columns.plane_sizes
+    terms, ess, penalty = rule.terms, rule.ess, rule.penalty * (columns.cardinalities[y] - 1)
+    memo, divisors = rule.memo, rule.divisors
     q = joint_states(columns, parents)
-    r = cardinalities[y]
+    r, n_words = cardinalities[y], planes.shape[1]
+    shift = r - 1 if rule.shifts else 0
     n_planes = split_planes(columns, parents, y, space) * r
     if n_planes > 0:
         own = score_table(base_sizes, n_planes // r, r, np.int64(1), q, rule)
     else:
         own = score_family(columns, parents, y, rule, space)
+    # Without parents the last state's cells follow from the margins.
+    n_counted = n_planes - 1 if parents.shape[0] == 0 else n_planes
     n_numbers = 0
     is_indexed = False
     for x in range(first, cardinalities.shape[0]):
@@ -463,10 +469,23 @@ def _score_additions(
         at, r_added = offsets[x], cardinalities[x]
         q_added = min(q * r_added, MAX_JOINT_STATES)
         if offsets[x + 1] > at and 0 < n_planes * (r_added - 1) <= MAX_OVERLAPS:
-            count_within(planes, at, r_added, base, base_sizes, n_planes, table)
-            gains[x] = -own + score_counts(
-                table, n_planes // r, r, r_added, q_added, terms, shifts, penalty, ess, memo, divisors
-            )
+            for c in range(n_planes * r_added):
+                table[c] = 0
+            count_within(planes, at, r_added, 0, n_words, base, base_sizes, n_counted, table)
+            if n_counted < n_planes:
+                for s in range(r_added):
+                    rest = plane_sizes[at + s]
+                    for c in range(n_counted):
+                        rest -= table[c * r_added + s]
+                    table[n_counted * r_added + s] = rest
+            if ess > 0.0:
+                of_cells = remembered(memo[0], divisors[0], ess, q_added * r)
+                of_margins = remembered(memo[1], divisors[1], ess, q_added)
+                a, b = ess / (q_added * r), ess / q_added
+                score = sum_rises(table, n_planes // r, r, r_added, of_cells, a, of_margins, b)
+            else:
+                score = sum_terms(table, n_planes // r, r, r_added, terms, shift) - penalty * q_added
+            gains[x] = score - own
             continue
         if n_numbers == 0:
             n_numbers = index_rows(columns, parents, space) * r

@@ -12,6 +12,7 @@ from generators.errors import InputError
 from generators.settings import REQUIRED, Between, Setting
 from harness.learners.builtin import BUILT_IN
 from harness.learners.sources import Resolved, resolve
+from harness.plan.expansion import CHANCE_DENSITY
 from harness.plan.messages import Faults, Section, unknown
 from harness.plan.recipes import learner_key
 from harness.records import Learner, Limits
@@ -89,8 +90,8 @@ def _read_one(section: Section, limits: Mapping[str, Any], folder: Path) -> list
     learners = []
     for values in itertools.product(*varied.values()):
         one = dict(zip(varied, values, strict=True))
-        settings = _without_defaults(declared, {**fixed, **one})
-        stem = label or _name(found.method, _without_defaults(declared, fixed))
+        settings = _that_count(found, {**fixed, **one})
+        stem = label or _name(found.method, _that_count(found, fixed))
         learners.append(_learner(found, _name(stem, one), settings, effective))
     return learners
 
@@ -165,8 +166,13 @@ def _refuse_twins(section: Section, learner: Learner, others: list[tuple[str, Le
             section.faults.add(section.place, what)
 
 
-def _without_defaults(declared: Mapping[str, Setting], settings: Mapping[str, Any]) -> dict[str, Any]:
-    return {name: value for name, value in settings.items() if value != declared[name].default}
+def _that_count(found: Resolved, settings: Mapping[str, Any]) -> dict[str, Any]:
+    """Leave out what is the default, but for the density of `chance`: not to give one means another one."""
+    declared = found.specification.settings
+    kept = CHANCE_DENSITY if found.source is None and found.method == "chance" else None
+    return {
+        name: value for name, value in settings.items() if name == kept or value != declared[name].default
+    }
 
 
 def _name(stem: str, settings: Mapping[str, Any]) -> str:

@@ -33,6 +33,7 @@ MAX_CONDITIONS = 2_000
 MAX_VARIABLES = 5_000
 MAX_COUNT = 100_000  # replicates or datasets
 GIVEN_DATASETS = 100  # of a given network, where the dataset is the unit, as 100 replicates are of drawn ones
+CHANCE_DENSITY = "mean_parents"  # the setting of `chance` that a condition fills in where the plan has none
 DENSITY_DRAWS = 200
 
 GIVEN_KEYS = ("file", "published")
@@ -96,7 +97,7 @@ def settings_for(learner: Learner, condition: Condition) -> dict[str, Any]:
     """
     settings = dict(learner.settings)
     if learner.source is None and learner.method == "chance":
-        settings.setdefault("mean_parents", mean_parents(condition.networks))
+        settings.setdefault(CHANCE_DENSITY, mean_parents(condition.networks))
     return settings
 
 
