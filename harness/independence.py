@@ -363,7 +363,7 @@ def critical_value(critical: CriticalValues, df: float) -> float:
             low = middle + 1
         else:
             high = middle
-    return critical.value[low] if low < critical.df.shape[0] else np.inf
+    return float(critical.value[low]) if low < critical.df.shape[0] else np.inf
 
 
 @inlined

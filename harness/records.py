@@ -120,7 +120,6 @@ class Learner:
     origin_digest : str
         Digest of the source's code, empty for built-in methods.
     limits : Limits
-    threads : int
     key : bytes
         Digest of method, settings and code.
     baseline : bool

@@ -46,7 +46,6 @@ from harness.independence import (
 from harness.learners.specification import learner
 
 DECIMALS = 6  # to which statistics are compared when they are ordered
-MIN_SHARING = 2  # sets that must share a bound for it to be worth its cost; measured
 
 
 @learner(
@@ -187,17 +186,9 @@ def find_skeleton(
         critical = attainable_critical_values(
             alpha, columns.cardinalities, n_given, ceilings.max(initial=0.0)
         )
+        is_pearson = test == "pearson"
         pairs, given, is_any_made = _separate(
-            columns,
-            statistics,
-            order,
-            n_given,
-            adjacent,
-            critical,
-            ceilings,
-            max_cells,
-            work,
-            test == "pearson",
+            columns, statistics, order, n_given, adjacent, critical, ceilings, max_cells, work, is_pearson
         )
         if not is_any_made:
             break
@@ -206,18 +197,13 @@ def find_skeleton(
 
 
 def _collect(levels: list[tuple[NDArray[np.int64], NDArray[np.int64]]]) -> Separators:
-    pair, end, variables = [
-        np.concatenate([np.empty(0, dtype=np.int64), *parts])
-        for parts in (
-            [pairs for pairs, _ in levels],
-            [np.full(len(pairs), given.shape[1]) for pairs, given in levels],
-            [given.ravel() for _, given in levels],
-        )
-    ]
-    end = np.cumsum(end)
-    start = np.concatenate([[0], end[:-1]]) if len(end) else end
+    nothing = np.empty(0, dtype=np.int64)
+    pair = np.concatenate([nothing, *[pairs for pairs, _ in levels]])
+    size = np.concatenate([nothing, *[np.full(len(pairs), given.shape[1]) for pairs, given in levels]])
+    variables = np.concatenate([nothing, *[given.ravel() for _, given in levels]])
+    end = np.cumsum(size)
     order = np.argsort(pair)
-    return Separators(pair[order], start[order], end[order], variables)
+    return Separators(pair[order], (end - size)[order], end[order], variables)
 
 
 def find_colliders(columns: Columns, skeleton: Skeleton, test: Test) -> NDArray[np.int64]:
@@ -274,75 +260,68 @@ def _separate(
     is_pearson: bool,
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], bool]:
     # One level: takes from `adjacent` the pairs that sets of n_given neighbours separate. Returns these
-    # pairs, what separated them, and whether there was any test to make.
+    # pairs (x p + y for x < y), what separated them, and whether there was any test to make.
     p = adjacent.shape[0]
     sizes = columns.cardinalities
     at, nodes = neighbour_lists(adjacent)
     frozen = adjacent.copy()
-    pairs = np.empty((nodes.shape[0] // 2, 2), dtype=np.int64)
-    separators = np.empty((nodes.shape[0] // 2, n_given), dtype=np.int64)
+    pairs = np.empty(nodes.shape[0] // 2, dtype=np.int64)
+    separating = np.empty((nodes.shape[0] // 2, n_given), dtype=np.int64)
     n_separated = 0
     is_any_made = False
     is_done = np.zeros(p, dtype=np.bool_)
     is_given = np.zeros(p, dtype=np.bool_)
     chosen = np.empty(n_given, dtype=np.int64)
     given = np.empty(n_given, dtype=np.int64)
-    gains = np.empty(p)
+    gains = np.zeros(p)
     for x in order:
         is_done[x] = True
         neighbours = _strongest_first(nodes[at[3 * x] : at[3 * x + 3]], statistics[x])
-        n_left = 0
-        for y in neighbours:
-            n_left += adjacent[x, y]
         if neighbours.shape[0] <= n_given:
             continue
         for j in range(n_given):
             chosen[j] = j
-        is_new_base = True
         changed = 0
-        while n_left > 0 and changed >= 0:
-            # Where the first of the given variables alone make too many cells for any partner, which has
-            # 2 states or more, so do all sets that begin with them.
-            cells, last = np.float64(sizes[x]), n_given - 1
-            for j in range(n_given):
-                given[j] = neighbours[chosen[j]]
-                cells *= sizes[given[j]]
-                if 2 * cells > max_cells:
-                    last = j
-                    break
-            if 2 * cells > max_cells:
-                changed = _next_combination(chosen, last, neighbours.shape[0])
-                is_new_base |= changed < n_given - 1
-                continue
-            if is_new_base and not is_pearson:
-                _find_gains(columns, statistics, given[:-1], x, neighbours, chosen, work, gains)
-            work.parts[:] = 0
-            is_given[given] = True
-            df = cells / sizes[x] * (sizes[x] - 1)
-            for i in range(neighbours.shape[0]):
-                y = neighbours[i]
-                if not adjacent[x, y] or is_given[y] or cells * sizes[y] > max_cells:
-                    continue
-                if is_done[y] and _all_adjacent(frozen, y, given):
-                    continue  # this very test was made when it was y's turn
-                is_any_made = True
-                limit = critical_value(critical, df * (sizes[y] - 1))
-                if gains[i] - gains[chosen[n_given - 1]] > limit + ROUNDING and not is_pearson:
-                    continue
-                is_separated = limit >= min(ceilings[x], ceilings[y])
-                if not is_separated:
-                    statistic = conditional_statistic(columns, given, x, y, work, is_pearson)
-                    is_separated = statistic <= limit + ROUNDING
-                if is_separated:
+        is_new_base = True
+        n_left = np.sum(adjacent[x])
+        while changed >= 0 and n_left > 0:
+            # A partner has 2 states or more: where even those make too many cells with the first few of
+            # the given variables, all sets that begin with these few are passed over.
+            cells, n_taken = np.float64(sizes[x]), 0
+            while n_taken < n_given and 2 * cells <= max_cells:
+                given[n_taken] = neighbours[chosen[n_taken]]
+                cells *= sizes[given[n_taken]]
+                n_taken += 1
+            is_testable = 2 * cells <= max_cells
+            if is_testable:
+                if is_new_base and not is_pearson:
+                    _find_gains(columns, statistics, adjacent, x, neighbours, chosen, n_left, work, gains)
+                work.parts[:] = 0
+                is_given[given] = True
+                for i in range(neighbours.shape[0]):
+                    y = neighbours[i]
+                    if not adjacent[x, y] or is_given[y] or cells * sizes[y] > max_cells:
+                        continue
+                    if is_done[y] and _all_adjacent(frozen, y, given):
+                        continue  # this very test was made when it was y's turn
+                    is_any_made = True
+                    df = cells / sizes[x] * (sizes[x] - 1) * (sizes[y] - 1)
+                    limit = critical_value(critical, df)
+                    if gains[i] - gains[chosen[n_given - 1]] > limit + ROUNDING:
+                        continue
+                    if limit < min(ceilings[x], ceilings[y]):
+                        statistic = conditional_statistic(columns, given, x, y, work, is_pearson)
+                        if statistic > limit + ROUNDING:
+                            continue
                     adjacent[x, y] = adjacent[y, x] = False
-                    pairs[n_separated, 0], pairs[n_separated, 1] = min(x, y), max(x, y)
-                    separators[n_separated] = given
+                    pairs[n_separated] = min(x, y) * p + max(x, y)
+                    separating[n_separated] = given
                     n_separated += 1
                     n_left -= 1
-            is_given[given] = False
-            changed = _next_combination(chosen, n_given - 1, neighbours.shape[0])
-            is_new_base = changed < n_given - 1
-    return pairs[:n_separated].copy(), separators[:n_separated].copy(), is_any_made
+                is_given[given] = False
+            changed = _next_combination(chosen, n_taken - 1, neighbours.shape[0])
+            is_new_base = changed < n_given - 1 or (is_new_base and not is_testable)
+    return pairs[:n_separated].copy(), separating[:n_separated].copy(), is_any_made
 
 
 @inlined
@@ -357,28 +336,33 @@ def _strongest_first(neighbours: Nodes, statistics: NDArray[np.float64]) -> Node
 def _find_gains(
     columns: Columns,
     statistics: NDArray[np.float64],
-    given: NDArray[np.int64],
+    adjacent: NDArray[np.bool_],
     x: int,
     neighbours: Nodes,
     chosen: NDArray[np.int64],
+    n_left: int,
     work: StatisticWorkspace,
     gains: NDArray[np.float64],
 ) -> None:
     # G2 is 2 n times a mutual information I of the counts, so the chain rule holds for it:
     # I(x; y | S, w) = I(x; y | S) + I(x; w | S, y) - I(x; w | S) >= I(x; y | S) - I(x; w | S).
-    # Where the right-hand side is significant, the left is, and need not be counted. Here: G2 of x with
-    # all neighbours given S, which serves every w.
-    if given.shape[0] == 0:
+    # Where the right-hand side is significant, so is the left, which need not be counted. Filled in here:
+    # G2 of x and its neighbours given S, all chosen ones but the last; serves every w and y.
+    k = chosen.shape[0] - 1
+    if k == 0:
         for i in range(neighbours.shape[0]):
             gains[i] = statistics[x, neighbours[i]]
         return
-    n_next = neighbours.shape[0] - 1 - chosen[given.shape[0] - 1]
-    if n_next < MIN_SHARING:
-        gains[: neighbours.shape[0]] = 0.0
-        return
+    n_next = neighbours.shape[0] - 1 - chosen[k - 1]
+    is_worth_it = n_left * n_next > n_left + n_next  # tests it may spare and tests it takes
+    given = np.empty(k, dtype=np.int64)
+    for j in range(k):
+        given[j] = neighbours[chosen[j]]
     work.parts[:] = 0
     for i in range(neighbours.shape[0]):
-        gains[i] = conditional_statistic(columns, given, x, neighbours[i], work, False)
+        gains[i] = 0.0
+        if is_worth_it and (adjacent[x, neighbours[i]] or i > chosen[k - 1]):
+            gains[i] = conditional_statistic(columns, given, x, neighbours[i], work, False)
 
 
 @inlined
@@ -386,7 +370,7 @@ def _all_adjacent(adjacent: NDArray[np.bool_], y: int, others: NDArray[np.int64]
     n_adjacent = 0
     for other in others:
         n_adjacent += adjacent[y, other]
-    return n_adjacent == others.shape[0]
+    return bool(n_adjacent == others.shape[0])
 
 
 @inlined

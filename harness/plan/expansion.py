@@ -7,7 +7,7 @@ import itertools
 import json
 import math
 import os
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -74,7 +74,7 @@ def expand(networks: Section, data: Section, seed: int, folder: Path) -> tuple[C
         _try_out(networks, level, seed)
     return tuple(
         Condition(level, {}, factors, replicates, datasets)
-        for level, factors in zip(levels, _factors(levels), strict=True)
+        for level, factors in zip(levels, _factors(levels, networks.content), strict=True)
     )
 
 
@@ -313,14 +313,18 @@ def _try_out(section: Section, networks: Networks, seed: int) -> None:
                 section.faults.add(section.place, fault)
 
 
-def _factors(levels: Sequence[Networks]) -> list[dict[str, Any]]:
-    """Return what tables show of each condition: the keys that have more than one value over the plan."""
+def _factors(levels: Sequence[Networks], written: Collection[str]) -> list[dict[str, Any]]:
+    """Return what tables show of each condition: the keys of the plan that have more than one value.
+
+    A default that follows another key, as the density does the number of variables, is no factor.
+    """
     shown = _with_short_paths(levels)
     values: dict[str, set[str]] = {}
     for level in shown:
         for key, value in level.items():
             values.setdefault(key, set()).add(canonical_json(value))
-    return [{key: value for key, value in level.items() if len(values[key]) > 1} for level in shown]
+    varied = {key for key, found in values.items() if len(found) > 1 and key in written}
+    return [{key: value for key, value in level.items() if key in varied} for level in shown]
 
 
 def _with_short_paths(levels: Sequence[Networks]) -> Sequence[Networks]:
