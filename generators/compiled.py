@@ -65,14 +65,25 @@ def inlined(function: Kernel) -> Kernel:
 
 
 def warm_up(function: Callable[[], None]) -> Callable[[], None]:
-    """Register a function that runs a module's kernels once on tiny input, so that all are compiled."""
+    """Register a function that runs a module's kernels once on tiny input, so that all are compiled.
+
+    On codes of one byte: what has more than 255 states is compiled when it is first met.
+    """
     _warm_ups.append(function)
     return function
 
 
-def warm_all() -> None:
-    """Run every registered warm-up, and note that this cache is complete."""
-    for function in _warm_ups:
+def warm_all(place: int = 0, n_places: int = 1) -> None:
+    """Run every registered warm-up, and note that this cache is complete.
+
+    Parameters
+    ----------
+    place, n_places : int
+        Of several processes that warm up at the same time: each begins elsewhere, so that on an empty
+        cache each compiles its share, and finds the others' when it comes to them.
+    """
+    first = place * len(_warm_ups) // n_places
+    for function in [*_warm_ups[first:], *_warm_ups[:first]]:
         function()
     folder = cache_folder()
     if folder is not None:

@@ -225,13 +225,12 @@ def _draw_states_by_row(u: Integers, row_of: Positions, thresholds: Integers, ce
 
 @warm_up
 def _warm_up() -> None:
-    for dtype in (np.uint8, np.uint16):
-        _fill(
-            np.empty((2, 1), dtype=dtype),
-            np.array([2, 2]),
-            np.array([0, 0, 1]),
-            np.zeros(1, dtype=np.uint32),
-            np.array([0, 2, 6]),
-            np.full(6, 0.5),
-            np.zeros(2, dtype=np.uint64),
-        )
+    _fill(
+        np.empty((2, 1), dtype=np.uint8),
+        np.array([2, 2]),
+        np.array([0, 0, 1]),
+        np.zeros(1, dtype=np.uint32),
+        np.array([0, 2, 6]),
+        np.full(6, 0.5),
+        np.zeros(2, dtype=np.uint64),
+    )

@@ -36,7 +36,7 @@ MAX_PLANE_STATES = 16  # a plane per state costs r / 8 bytes a row; above this m
 BLOCK_WORDS = 128  # planes are combined in blocks that stay in the first-level cache
 BLOCK_ROWS = 4096
 MAX_PLANE_CELLS = 160  # `count` uses planes for tables of at most this many cells
-MAX_BASE_PLANES = 48  # of a base that learners share between tables
+MAX_BASE_PLANES = 96  # of a base that learners share between tables
 MAX_PRIVATE_CELLS = 4096  # tables of at most this many cells are counted in four copies
 MANY_CELLS = 1 << 20  # larger tables are allocated only where there are as many rows
 FEW_STATES = 16  # up to this many joint states, leaving out those that do not occur does not pay
@@ -776,7 +776,5 @@ def _index_block(
 
 @warm_up
 def _compile() -> None:
-    for max_states in (2, 300):
-        states = tuple(tuple(str(s) for s in range(r)) for r in (2, max_states))
-        columns = prepare(Dataset(("a", "b"), states, np.zeros((2, 2), dtype=code_dtype(max_states))))
-        count(columns, [0, 1])
+    columns = prepare(Dataset(("a", "b"), (("0", "1"),) * 2, np.zeros((2, 2), dtype=np.uint8)))
+    count(columns, [0, 1])

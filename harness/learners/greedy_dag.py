@@ -58,7 +58,7 @@ from harness.records import Declined
 
 MAX_MEGABYTES = 1024
 START_MEAN_PARENTS = 1.0
-MAX_OVERLAPS = 96  # tables with more cells to count on planes are counted by index
+MAX_OVERLAPS = 160  # tables with more cells to count on planes are counted by index
 NONE, ADD, DELETE, REVERSE = range(4)
 
 

@@ -410,7 +410,8 @@ def start(tmp_path: Path, token: str, scratch: Path) -> Iterator[Callable[..., s
     yield begin
     for process in started:
         process.kill()
-        process.communicate()
+        process.wait()
+        process.stderr.close()
     for process in marked(token):
         process.kill()
 
