@@ -36,7 +36,7 @@ MAX_PLANE_STATES = 16  # a plane per state costs r / 8 bytes a row; above this m
 BLOCK_WORDS = 128  # planes are combined in blocks that stay in the first-level cache
 BLOCK_ROWS = 4096
 MAX_PLANE_CELLS = 160  # `count` uses planes for tables of at most this many cells
-MAX_BASE_PLANES = 96  # of a base that learners share between tables
+MAX_BASE_PLANES = 128  # of a base that learners share between tables
 MAX_PRIVATE_CELLS = 4096  # tables of at most this many cells are counted in four copies
 MANY_CELLS = 1 << 20  # larger tables are allocated only where there are as many rows
 FEW_STATES = 16  # up to this many joint states, leaving out those that do not occur does not pay
@@ -202,7 +202,7 @@ class Workspace(NamedTuple):
 
 
 def workspace(columns: Columns) -> Workspace:
-    """Allocate the scratch arrays for one dataset: at most 60 bytes a row, and 0.1 MB."""
+    """Allocate the scratch arrays for one dataset: at most 70 bytes a row, and 0.1 MB."""
     n = columns.codes.shape[1]
     max_states = int(columns.cardinalities.max(initial=1))
     return Workspace(

@@ -213,7 +213,7 @@ def _run_and_report(
     read = read_plan(plan)
     place = ledger or ledger_path(plan)
     for note in read.notes:
-        say(f"Note: {note}.", quiet=quiet)
+        say(f"Note: {note}", quiet=quiet)
     summary = run_plan(read, place, n_workers=workers, watcher=LiveWatcher(quiet))
     _say_ending(summary, plan, quiet)
     if summary.was_stopped:

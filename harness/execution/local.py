@@ -124,7 +124,7 @@ class LocalEngine:
             If workers keep dying.
         """
         source = iter(works)
-        self._workers.append(self._start())
+        self._workers += [self._start(place) for place in range(self._n_workers)]
         told_to_stop = False
         while True:
             if self._is_stopping and not told_to_stop:
@@ -187,10 +187,8 @@ class LocalEngine:
             worker.folder = rest[0]
             if not self._was_ready:
                 self._was_ready = True
-                # The first has compiled what there was to compile; the others find it in the cache.
                 if on_ready is not None:
                     on_ready()
-                self._workers += [self._start() for _ in range(self._n_workers - 1)]
         elif word == "finished":
             del worker.open_work[rest[0]], worker.ended[rest[0]]
         elif word == "stopped":
@@ -231,7 +229,8 @@ class LocalEngine:
         if not self._is_stopping:
             self._workers.append(self._start())
 
-    def _start(self) -> _Worker:
+    def _start(self, place: int = 0) -> _Worker:
+        """Start the worker that begins at this place of what there may be to compile."""
         ours, theirs = socket.socketpair()
         arguments = [str(_ROOT), str(theirs.fileno()), str(os.getpid())]
         try:
@@ -255,7 +254,7 @@ class LocalEngine:
         connection = Connection(ours.detach())
         # Where this process finds a learner's module, so must that one.
         path = [os.path.abspath(place) for place in sys.path if os.path.exists(place or os.curdir)]
-        connection.send((self._learners, path))
+        connection.send((self._learners, path, (place, self._n_workers)))
         return _Worker(process, connection, errors, mark)
 
 

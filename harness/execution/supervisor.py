@@ -87,9 +87,11 @@ class Supervisor:
         To the main process.
     learners : tuple of Learner
         All of the plan, in its order.
+    share : tuple of int
+        Its place among the supervisors that start together, and how many they are: each compiles its share.
     """
 
-    def __init__(self, main: Connection, learners: tuple[Learner, ...]) -> None:
+    def __init__(self, main: Connection, learners: tuple[Learner, ...], share: tuple[int, int]) -> None:
         self._main = main
         self._learners = learners
         self._queue: deque[Work] = deque()
@@ -102,7 +104,7 @@ class Supervisor:
         self._specifications = {
             i: built_in(learner.method) for i, learner in enumerate(learners) if not needs_isolation(learner)
         }
-        _warm_up()
+        _warm_up(*share)
         gc.collect()
         gc.freeze()  # a runner's collections would copy every page of this
         self._folder = tempfile.mkdtemp(prefix="arcassay-")  # holds the working folders of runners
@@ -364,15 +366,18 @@ def _signal_name(number: int) -> str:
         return str(number)
 
 
-def _warm_up() -> None:
-    """Compile what is not in the cache in a child, whose memory is not that of every runner to come."""
+def _warm_up(place: int, n_places: int) -> None:
+    """Compile what is not in the cache in a child, whose memory is not that of every runner to come.
+
+    The first `n_places` supervisors begin at different places, and find each other's work in the cache.
+    """
     if not compiled.is_warm():
         parent = os.getpid()
         pid = os.fork()
         if not pid:
             try:
                 processes.die_with_parent(parent)
-                compiled.warm_all()
+                compiled.warm_all(place, n_places)
             finally:
                 os._exit(0)
         os.waitpid(pid, 0)
@@ -389,9 +394,9 @@ def main(file: int, parent: int) -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _end_in_order)
     connection = Connection(file)
-    learners, path = connection.recv()
+    learners, path, share = connection.recv()
     sys.path += [place for place in path if place not in sys.path]
-    supervisor = Supervisor(connection, learners)
+    supervisor = Supervisor(connection, learners, share)
     processes.adopt_orphans()
     processes.survive_parent()
     supervisor.serve()

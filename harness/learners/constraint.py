@@ -233,7 +233,8 @@ def find_colliders(columns: Columns, skeleton: Skeleton, test: Test) -> NDArray[
     statistic, df = _collider_statistics(
         columns, contested, skeleton.separators, statistic_workspace(columns), test == "pearson"
     )
-    order = np.lexsort((-np.round(statistic, DECIMALS), chdtrc(df, statistic)))
+    statistic = np.round(statistic, DECIMALS)
+    order = np.lexsort((-statistic, chdtrc(df, statistic)))
     return np.concatenate([colliders[~is_contested], contested[order]])
 
 

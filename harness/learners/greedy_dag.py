@@ -58,7 +58,7 @@ from harness.records import Declined
 
 MAX_MEGABYTES = 1024
 START_MEAN_PARENTS = 1.0
-MAX_OVERLAPS = 160  # tables with more cells to count on planes are counted by index
+MAX_OVERLAPS = 128  # tables with more cells to count on planes are counted by index
 NONE, ADD, DELETE, REVERSE = range(4)
 
 
@@ -163,10 +163,10 @@ def megabytes(data: Dataset) -> float:
     """Return what a search takes at most, in units of 2^20 bytes.
 
     The gains are two arrays of p x p numbers of 8 bytes, beside p x p bytes and bits; the planes take one
-    bit per row and state, scratch arrays about 64 bytes a row.
+    bit per row and state, scratch arrays about 70 bytes a row.
     """
     p, n = data.n_variables, data.n_rows
-    return (18 * p * p + n * (int(data.cardinalities.sum()) / 8 + 64)) / 2**20
+    return (18 * p * p + n * (int(data.cardinalities.sum()) / 8 + 70)) / 2**20
 
 
 class Search(NamedTuple):
@@ -283,37 +283,38 @@ def _score_pairs(
 @inlined
 def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, int, int]:
     # The move, and the arc x -> y that it adds, deletes or reverses.
-    p = state.scores.shape[0]
+    gains, parents, n_parents = state.gains, state.parents, state.n_parents
+    is_parent, best_gain, reaches = state.is_parent, state.best_gain, state.reaches
+    p = gains.shape[0]
     greatest = -np.inf
     for y in range(p):
-        for x in state.parents[y, : state.n_parents[y]]:
-            greatest = max(greatest, state.gains[y, x])
-            gain = state.gains[y, x] + state.gains[x, y]
+        for x in parents[y, : n_parents[y]]:
+            greatest = max(greatest, gains[y, x])
+            gain = gains[y, x] + gains[x, y]
             if gain > greatest and _may_reverse(state, x, y, max_parents):
                 greatest = gain
     for y in range(p):
-        if state.best_gain[y] >= greatest - width:
-            if _has_bit(state.reaches[y], state.best_source[y]):
+        if best_gain[y] >= greatest - width:
+            if _has_bit(reaches[y], state.best_source[y]):
                 _find_best_addition(state, y)
-            greatest = max(greatest, state.best_gain[y])
+            greatest = max(greatest, best_gain[y])
     if not greatest > width:
         return NONE, -1, -1
 
     enough = max(greatest - width, width)
     move, first_x, first_y = NONE, p, p
     for y in range(p):
-        for x in state.parents[y, : state.n_parents[y]]:
+        for x in parents[y, : n_parents[y]]:
             if (x, y) < (first_x, first_y):
-                if state.gains[y, x] >= enough:
+                gain = gains[y, x] + gains[x, y]
+                if gains[y, x] >= enough:
                     move, first_x, first_y = DELETE, x, y
-                elif state.gains[y, x] + state.gains[x, y] >= enough and _may_reverse(
-                    state, x, y, max_parents
-                ):
+                elif gain >= enough and _may_reverse(state, x, y, max_parents):
                     move, first_x, first_y = REVERSE, x, y
-        if state.best_gain[y] >= enough:
+        if best_gain[y] >= enough:
             for x in range(min(p, first_x + 1)):
-                is_legal = not state.is_parent[y, x] and not _has_bit(state.reaches[y], x)
-                if state.gains[y, x] >= enough and is_legal and (x, y) < (first_x, first_y):
+                is_legal = not is_parent[y, x] and not _has_bit(reaches[y], x)
+                if gains[y, x] >= enough and is_legal and (x, y) < (first_x, first_y):
                     move, first_x, first_y = ADD, x, y
                     break
     return move, first_x, first_y
@@ -445,65 +446,110 @@ def _score_additions(
     space: Workspace,
 ) -> float:
     # Fills gains[x] for x = first, ..., p - 1 that are neither y nor its parents, and returns the score
-    # of y with its parents alone. Tables are counted on planes while they are small, by index while they
-    # fit, and from the joint states that occur beyond; the index is made when it is first needed.
-    planes, offsets, cardinalities = columns.planes, columns.offsets, columns.cardinalities
-    base, base_sizes, table, plane_sizes = space.base, space.base_sizes, space.table, columns.plane_sizes
-    terms, ess, penalty = rule.terms, rule.ess, rule.penalty * (columns.cardinalities[y] - 1)
-    memo, divisors = rule.memo, rule.divisors
-    q = joint_states(columns, parents)
-    r, n_words = cardinalities[y], planes.shape[1]
-    shift = r - 1 if rule.shifts else 0
+    # of y with its parents alone.
+    r = columns.cardinalities[y]
     n_planes = split_planes(columns, parents, y, space) * r
     if n_planes > 0:
-        own = score_table(base_sizes, n_planes // r, r, np.int64(1), q, rule)
+        q = joint_states(columns, parents)
+        own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
+        _score_on_planes(columns, rule, parents, y, is_parent, first, gains, n_planes, own, space)
     else:
         own = score_family(columns, parents, y, rule, space)
-    # Without parents the last state's cells follow from the margins.
+    _score_by_index(columns, rule, parents, y, is_parent, first, gains, n_planes, own, space)
+    return own
+
+
+@inlined
+def _fits_planes(n_planes: int, offsets: NDArray[np.int64], x: int) -> bool:
+    r_added = offsets[x + 1] - offsets[x]
+    return bool(r_added > 0 and 0 < n_planes * (r_added - 1) <= MAX_OVERLAPS)
+
+
+@inlined
+def _score_on_planes(
+    columns: Columns,
+    rule: Scoring,
+    parents: NDArray[np.int64],
+    y: int,
+    is_parent: NDArray[np.bool_],
+    first: int | np.int64,
+    gains: NDArray[np.float64],
+    n_planes: int,
+    own: float,
+    space: Workspace,
+) -> None:
+    # The innermost loop of the search: nothing in it takes a tuple of arrays (see `count_within`).
+    planes, offsets, plane_sizes = columns.planes, columns.offsets, columns.plane_sizes
+    base, base_sizes, table = space.base, space.base_sizes, space.table
+    terms, memo, divisors, ess = rule.terms, rule.memo, rule.divisors, rule.ess
+    n_words, r = planes.shape[1], columns.cardinalities[y]
+    n_parts, q = n_planes // r, joint_states(columns, parents)
+    shift, penalty = r - 1 if rule.shifts else 0, rule.penalty * (r - 1)
+    # Without parents, the cells of y's last state follow from the margins.
     n_counted = n_planes - 1 if parents.shape[0] == 0 else n_planes
+    for x in range(first, offsets.shape[0] - 1):
+        if x == y or is_parent[x] or not _fits_planes(n_planes, offsets, x):
+            continue
+        at = offsets[x]
+        r_added = offsets[x + 1] - at
+        for c in range(n_planes * r_added):
+            table[c] = 0
+        count_within(planes, at, r_added, 0, n_words, base, base_sizes, n_counted, table)
+        if n_counted < n_planes:
+            for s in range(r_added):
+                rest = plane_sizes[at + s]
+                for c in range(n_counted):
+                    rest -= table[c * r_added + s]
+                table[n_counted * r_added + s] = rest
+        q_added = min(q * r_added, MAX_JOINT_STATES)
+        if ess > 0.0:
+            of_cells = remembered(memo[0], divisors[0], ess, q_added * r)
+            of_margins = remembered(memo[1], divisors[1], ess, q_added)
+            a, b = ess / (q_added * r), ess / q_added
+            score = sum_rises(table, n_parts, r, r_added, of_cells, a, of_margins, b)
+        else:
+            score = sum_terms(table, n_parts, r, r_added, terms, shift) - penalty * q_added
+        gains[x] = score - own
+
+
+@inlined
+def _score_by_index(
+    columns: Columns,
+    rule: Scoring,
+    parents: NDArray[np.int64],
+    y: int,
+    is_parent: NDArray[np.bool_],
+    first: int | np.int64,
+    gains: NDArray[np.float64],
+    n_planes: int,
+    own: float,
+    space: Workspace,
+) -> None:
+    # The index is made when it is first needed; tables that do not fit overwrite it.
+    r, q, room = columns.cardinalities[y], joint_states(columns, parents), space.table.shape[0]
+    family = np.empty(parents.shape[0] + 2, dtype=np.int64)
+    family[0] = y
+    for j in range(parents.shape[0]):
+        family[j + 2] = parents[j]
     n_numbers = 0
     is_indexed = False
-    for x in range(first, cardinalities.shape[0]):
-        if x == y or is_parent[x]:
+    for x in range(first, columns.offsets.shape[0] - 1):
+        if x == y or is_parent[x] or _fits_planes(n_planes, columns.offsets, x):
             continue
-        at, r_added = offsets[x], cardinalities[x]
+        r_added = columns.cardinalities[x]
         q_added = min(q * r_added, MAX_JOINT_STATES)
-        if offsets[x + 1] > at and 0 < n_planes * (r_added - 1) <= MAX_OVERLAPS:
-            for c in range(n_planes * r_added):
-                table[c] = 0
-            count_within(planes, at, r_added, 0, n_words, base, base_sizes, n_counted, table)
-            if n_counted < n_planes:
-                for s in range(r_added):
-                    rest = plane_sizes[at + s]
-                    for c in range(n_counted):
-                        rest -= table[c * r_added + s]
-                    table[n_counted * r_added + s] = rest
-            if ess > 0.0:
-                of_cells = remembered(memo[0], divisors[0], ess, q_added * r)
-                of_margins = remembered(memo[1], divisors[1], ess, q_added)
-                a, b = ess / (q_added * r), ess / q_added
-                score = sum_rises(table, n_planes // r, r, r_added, of_cells, a, of_margins, b)
-            else:
-                score = sum_terms(table, n_planes // r, r, r_added, terms, shift) - penalty * q_added
-            gains[x] = score - own
-            continue
-        if n_numbers == 0:
+        if not is_indexed and n_numbers * r_added <= room:
             n_numbers = index_rows(columns, parents, space) * r
-        if n_numbers * r_added <= table.shape[0]:
-            if not is_indexed:
-                index_rows(columns, parents, space)
+            if n_numbers <= room:
                 append_column(columns, y, space)
                 is_indexed = True
-            tabulate_index(columns, x, n_numbers, space)
-            gains[x] = score_table(table, n_numbers // r, r, r_added, q_added, rule) - own
+        if is_indexed and tabulate_index(columns, x, n_numbers, space):
+            score = score_table(space.table, n_numbers // r, r, r_added, q_added, rule)
         else:
-            family = np.empty(parents.shape[0] + 2, dtype=np.int64)
-            family[0], family[1] = y, x
-            for j in range(parents.shape[0]):
-                family[j + 2] = parents[j]
-            gains[x] = score_occurring(columns, family, q_added, rule, space) - own
+            family[1] = x
+            score = score_occurring(columns, family, q_added, rule, space)
             is_indexed = False
-    return own
+        gains[x] = score - own
 
 
 @warm_up

@@ -141,7 +141,7 @@ def notes_on(conditions: Iterable[Condition]) -> list[str]:
         if asked - expected >= 0.05:
             notes.append(
                 f"random-order networks of {own['variables']} variables: {expected:.1f} arcs expected after "
-                f"the cap of {own['max_parents']} parents, {asked:.1f} asked for"
+                f"the cap of {own['max_parents']} parents, {asked:.1f} asked for."
             )
     return list(dict.fromkeys(notes))
 

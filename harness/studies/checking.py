@@ -52,7 +52,7 @@ class Check:
             f"{_n(n_datasets, 'dataset')} in all, "
             f"{_n(len(plan.rows), 'row count')}, {_n(len(plan.learners), 'learner')}.",
         ]
-        lines += [f"Note: {note}." for note in plan.notes]
+        lines += [f"Note: {note}" for note in plan.notes]
         if self.seconds is None:
             lines.append(f"No run ended within {PROBE_SECONDS:g} s: the time cannot be told.")
             return lines

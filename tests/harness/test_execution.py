@@ -950,7 +950,7 @@ def test_full_disk_stops_the_work_and_it_resumes(
             original = Ledger.commit
 
             def commit(self: Ledger) -> None:
-                self._connection.execute("PRAGMA max_page_count = 30")
+                self._connection.execute("PRAGMA max_page_count = 20")
                 original(self)
 
             patch.setattr(Ledger, "commit", commit)

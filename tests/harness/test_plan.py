@@ -347,7 +347,7 @@ def test_what_a_cap_takes_away_is_noted() -> None:
     assert round(expected, 1) == 17.5
     assert plan.notes == (
         "random-order networks of 12 variables: 17.5 arcs expected after the cap of 4 parents, "
-        "18.0 asked for",
+        "18.0 asked for.",
     )
 
 

@@ -1,0 +1,454 @@
+"""PC: against a plain Python version, exact power, published data and known networks."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import combinations
+
+import numpy as np
+import pytest
+from scipy.special import gammaln
+from scipy.stats import binomtest, chi2
+
+from generators.classes import cpdag, meek_rules
+from generators.dataset import Dataset, View
+from generators.graph import Graph
+from generators.network import Cpt, Network
+from harness.counts import count_plain, prepare
+from harness.independence import independence_test
+from harness.learners.constraint import find_colliders, find_skeleton, pc
+
+
+def dataset_of(codes: np.ndarray, cardinalities: list[int]) -> Dataset:
+    """Wrap codes, variables named v0, v1, ..."""
+    dtype = np.uint8 if max(cardinalities, default=1) < 256 else np.uint16
+    names = tuple(f"v{j}" for j in range(len(cardinalities)))
+    states = tuple(tuple(str(s) for s in range(r)) for r in cardinalities)
+    return Dataset(names, states, np.asarray(codes, dtype=dtype).reshape(-1, len(cardinalities)))
+
+
+def random_network(p: int, rng: np.random.Generator, *, mean_parents: float, concentration: float) -> Network:
+    """Draw a DAG over a random order, up to three parents each, with 2 or 3 states and Dirichlet rows."""
+    names = tuple(f"v{j}" for j in range(p))
+    order = rng.permutation(p)
+    sizes = rng.integers(2, 4, p)
+    parents: list[list[int]] = [[] for _ in range(p)]
+    for place, v in enumerate(order):
+        n_parents = min(place, 3, rng.poisson(mean_parents))
+        parents[v] = sorted(rng.choice(order[:place], n_parents, replace=False).tolist()) if n_parents else []
+    arcs = [(names[u], names[v]) for v in range(p) for u in parents[v]]
+    cpts = {}
+    for v in range(p):
+        rows = rng.dirichlet(np.full(sizes[v], concentration), int(np.prod(sizes[parents[v]])))
+        shape = (*sizes[parents[v]], sizes[v])
+        cpts[names[v]] = Cpt(names[v], tuple(names[u] for u in parents[v]), rows.reshape(shape))
+    states = tuple(tuple(str(s) for s in range(r)) for r in sizes)
+    return Network(Graph.from_edges(names, arcs), states, cpts)
+
+
+@dataclass
+class Plain:
+    """What the plain version finds; it follows the rules as they are stated, one pair after another."""
+
+    adjacent: np.ndarray
+    separators: dict[tuple[int, int], tuple[int, ...]]
+    colliders: list[tuple[int, int, int]]
+    arrow: np.ndarray
+
+
+def plain_pc(
+    data: Dataset, alpha: float, test: str, min_per_cell: float = 0, max_conditioning: int | None = None
+) -> Plain:
+    """Run PC in plain Python, with numpy tables and scipy quantiles."""
+    columns = prepare(data)
+    p, sizes = data.n_variables, data.cardinalities.tolist()
+
+    def test_of(x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
+        table = count_plain(columns, [*given, x, y])
+        result = independence_test(table.reshape(-1, *table.shape[-2:]), test=test)
+        return round(result.statistic, 6), result.df
+
+    def separates(x: int, y: int, given: tuple[int, ...]) -> bool:
+        statistic, df = test_of(x, y, given)
+        cells = np.prod([float(sizes[v]) for v in (*given, x, y)])
+        if df > 0 and data.n_rows < min_per_cell * cells:
+            return False
+        return df == 0 or statistic <= chi2.isf(alpha, df)
+
+    strength = np.zeros((p, p))
+    for x, y in combinations(range(p), 2):
+        strength[x, y] = strength[y, x] = test_of(x, y, ())[0]
+    turn = sorted(range(p), key=lambda x: (round(strength[x].sum(), 6), x))
+    adjacent = np.zeros((p, p), dtype=bool)
+    for x, y in combinations(range(p), 2):
+        adjacent[x, y] = adjacent[y, x] = not separates(x, y, ())
+    separators: dict[tuple[int, int], tuple[int, ...]] = {}
+    k = 1
+    while (max_conditioning is None or k <= max_conditioning) and adjacent.sum(axis=0).max(initial=0) > k:
+        near = [
+            sorted(np.flatnonzero(adjacent[x]).tolist(), key=lambda y: (-strength[x, y], y)) for x in range(p)
+        ]
+        for a, b in combinations(range(p), 2):
+            if adjacent[a, b]:
+                first, second = sorted((a, b), key=turn.index)
+                sets = [s for s in combinations(near[first], k) if second not in s]
+                sets += [s for s in combinations(near[second], k) if first not in s]
+                found = next((s for s in sets if separates(a, b, s)), None)
+                if found is not None:
+                    separators[a, b] = found
+        for pair, given in separators.items():
+            if len(given) == k:
+                adjacent[pair] = adjacent[pair[::-1]] = False
+        k += 1
+
+    colliders = [
+        (x, z, y)
+        for z in range(p)
+        for x, y in combinations(np.flatnonzero(adjacent[z]).tolist(), 2)
+        if not adjacent[x, y] and z not in separators.get((x, y), ())
+    ]
+    arrows = {arrow for x, z, y in colliders for arrow in ((x, z), (y, z))}
+
+    def priority(collider: tuple[int, int, int]) -> tuple[float, ...]:
+        x, z, y = collider
+        if (z, x) not in arrows and (z, y) not in arrows:
+            return (-1.0,)
+        statistic, df = test_of(x, y, (*separators.get((x, y), ()), z))
+        return (chi2.sf(statistic, df), -statistic)
+
+    colliders.sort(key=priority)
+    arrow = adjacent.copy()
+    for x, z, y in colliders:
+        if arrow[x, z] and arrow[y, z]:
+            arrow[z, x] = arrow[z, y] = False
+    return Plain(adjacent, separators, colliders, arrow)
+
+
+def random_dataset(seed: int) -> Dataset:
+    """Draw a dataset of 5 to 8 variables: from networks sparse and dense, or with copies and constants."""
+    rng = np.random.default_rng(seed)
+    n = int(rng.choice([10, 60, 200, 1000, 4000]))
+    network = random_network(int(rng.integers(5, 9)), rng, mean_parents=rng.choice([1, 2]), concentration=1)
+    data = network.sample(n, rng=rng)
+    if seed % 4 == 0:
+        codes = np.array(data.codes)
+        codes[:, 0] = 0
+        codes[:, 1] = np.minimum(codes[:, 2], len(data.states[1]) - 1)
+        data = Dataset(data.names, data.states, codes)
+    return data
+
+
+class TestAgainstPlain:
+    """The compiled learner does what the stated rules say."""
+
+    @pytest.mark.parametrize(
+        "settings",
+        [
+            {"alpha": 0.01, "test": "g2"},
+            {"alpha": 0.05, "test": "pearson"},
+            {"alpha": 0.3, "test": "g2"},
+            {"alpha": 0.05, "test": "g2", "min_per_cell": 5.0},
+            {"alpha": 0.05, "test": "g2", "max_conditioning": 1},
+        ],
+    )
+    def test_same_at_every_step(self, settings: dict[str, float | str | int]) -> None:
+        """Skeleton, separating sets, colliders in their order, and directions are the plain version's."""
+        n_separated = n_colliders = n_deep = 0
+        for seed in range(60):
+            data = random_dataset(seed)
+            columns = prepare(data)
+            expected = plain_pc(data, **settings)
+
+            found = find_skeleton(columns, **settings)
+            colliders = find_colliders(columns, found, settings["test"])
+            graph = pc(data, **settings)
+
+            p = data.n_variables
+            apart = {
+                (x, y): found.separator(x, y)
+                for x, y in combinations(range(p), 2)
+                if not found.adjacent[x, y]
+            }
+            assert np.array_equal(expected.adjacent, found.adjacent)
+            assert expected.separators == {pair: given for pair, given in apart.items() if given}
+            assert expected.colliders == [tuple(row) for row in colliders.tolist()]
+            meek_rules(expected.arrow)
+            assert np.array_equal(expected.arrow, graph.arrow)
+            n_separated += len(expected.separators)
+            n_deep += sum(len(given) > 1 for given in expected.separators.values())
+            n_colliders += len(colliders)
+        assert n_separated > 100
+        assert n_colliders > 30
+        assert (n_deep > 0) == ("max_conditioning" not in settings)
+
+
+class TestOrder:
+    """What does not depend on the order of the columns."""
+
+    def test_skeleton_and_colliders(self) -> None:
+        """Permuting columns and relabelling states leaves skeleton and colliders as they are."""
+        rng = np.random.default_rng(7)
+        for seed in range(50):
+            network = random_network(12, np.random.default_rng(seed), mean_parents=1.5, concentration=1)
+            data = network.sample(500, rng=rng)
+            view = View.draw(data.cardinalities.tolist(), rng)
+            masked = view.mask(data)
+
+            plain = find_skeleton(prepare(data), alpha=0.05)
+            other = find_skeleton(prepare(masked), alpha=0.05)
+
+            assert np.array_equal(plain.adjacent[np.ix_(view.columns, view.columns)], other.adjacent)
+            triples = [
+                {(z, frozenset((x, y))) for x, z, y in rows}
+                for rows in (
+                    find_colliders(prepare(data), plain, "g2").tolist(),
+                    view.columns[find_colliders(prepare(masked), other, "g2")].tolist(),
+                )
+            ]
+            assert triples[0] == triples[1]
+
+    def test_rows(self, rng: np.random.Generator) -> None:
+        """The order of the rows does not matter."""
+        data = random_network(10, rng, mean_parents=1.5, concentration=1).sample(700, rng=rng)
+        shuffled = Dataset(data.names, data.states, data.codes[rng.permutation(700)])
+
+        assert pc(data) == pc(shuffled)
+
+
+def exact_power(n: int, w: float, alpha: float) -> float:
+    """Add up the multinomial probabilities of all 2 x 2 tables of n rows that G2 rejects."""
+    a, b, c = np.meshgrid(*[np.arange(n + 1)] * 3, indexing="ij")
+    d = n - a - b - c
+    a, b, c, d = (cell[d >= 0].astype(float) for cell in (a, b, c, d))
+
+    def f(m: np.ndarray) -> np.ndarray:
+        return m * np.log(np.maximum(m, 1))
+
+    g2 = 2 * (f(a) + f(b) + f(c) + f(d) - f(a + b) - f(c + d) - f(a + c) - f(b + d) + n * np.log(n))
+    agree, differ = np.log((1 + w) / 4), np.log((1 - w) / 4)
+    log_p = gammaln(n + 1) - gammaln(a + 1) - gammaln(b + 1) - gammaln(c + 1) - gammaln(d + 1)
+    log_p += (a + d) * agree + (b + c) * differ
+    return float(np.exp(log_p[g2 > chi2.isf(alpha, 1)]).sum())
+
+
+class TestExactPower:
+    """Two binary variables with uniform margins that agree with probability (1 + w) / 2."""
+
+    @pytest.mark.parametrize(
+        ("n", "w", "alpha"),
+        [(38, 0.5, 0.05), (55, 0.5, 0.01), (113, 0.3, 0.05), (161, 0.3, 0.01), (60, 0.0, 0.05)],
+    )
+    def test_share_of_edges(self, n: int, w: float, alpha: float) -> None:
+        """The share of datasets with an edge agrees with the exact power; false-alarm rate 1e-6 a case."""
+        rng = np.random.default_rng(n)
+        power = exact_power(n, w, alpha)
+        cells = np.array([[0, 0], [0, 1], [1, 0], [1, 1]], dtype=np.uint8)
+        tables = rng.multinomial(n, np.array([1 + w, 1 - w, 1 - w, 1 + w]) / 4, 3000)
+
+        n_edges = sum(
+            pc(dataset_of(np.repeat(cells, table, axis=0), [2, 2]), alpha=alpha).n_edges for table in tables
+        )
+
+        assert binomtest(n_edges, len(tables), power).pvalue > 1e-6
+
+    @pytest.mark.parametrize(("n", "w", "alpha"), [(38, 0.5, 0.05), (55, 0.5, 0.01), (113, 0.3, 0.05)])
+    def test_first_to_reach(self, n: int, w: float, alpha: float) -> None:
+        """These are the first row counts whose exact power is at least .9, so the oracle above is right.
+
+        Full multinomial enumeration by two programs; the closed form n w^2 = 10.507 gives 43, 60 and 117.
+        """
+        assert exact_power(n, w, alpha) >= 0.9 > exact_power(n - 1, w, alpha)
+
+
+# Berkeley admissions 1973: men admitted, men rejected, women admitted, women rejected, by department (Bickel,
+# Hammel and O'Connell, Science 187, 1975, 398-404; counts as listed in a University of Toronto handout).
+BERKELEY = np.array(
+    [
+        [[512, 313], [89, 19]],
+        [[353, 207], [17, 8]],
+        [[120, 205], [202, 391]],
+        [[138, 279], [131, 244]],
+        [[53, 138], [94, 299]],
+        [[22, 351], [24, 317]],
+    ]
+)
+
+
+class TestBerkeley:
+    """Sex and admission given department: G2 21.7355, X2 19.9384 on 6 df."""
+
+    @pytest.mark.parametrize(
+        ("alpha", "test", "is_kept"),
+        [
+            (0.05, "g2", True),  # critical value 12.59
+            (0.01, "g2", True),  # 16.81
+            (0.001, "g2", False),  # 22.46
+            (0.01, "pearson", True),
+            (0.002, "pearson", False),  # 20.79
+        ],
+    )
+    def test_sex_and_admission(self, alpha: float, test: str, is_kept: bool) -> None:
+        """The edge between sex and admission stays as long as the test given department rejects."""
+        codes = np.repeat(np.argwhere(BERKELEY >= 0), BERKELEY.ravel(), axis=0).astype(np.uint8)
+        states = (tuple("ABCDEF"), ("man", "woman"), ("admitted", "rejected"))
+        data = Dataset(("department", "sex", "admission"), states, codes)
+
+        graph = pc(data, alpha=alpha, test=test)
+
+        edges = {frozenset(edge[:2]) for edge in graph.edges()}
+        assert is_kept == (frozenset(("sex", "admission")) in edges)
+        assert frozenset(("department", "sex")) in edges
+        assert frozenset(("department", "admission")) in edges
+        assert graph.is_directed is False
+
+
+class TestKnownNetworks:
+    """With many rows and strong arcs the true class comes back."""
+
+    def test_collider_and_what_follows(self, rng: np.random.Generator) -> None:
+        """In a -> c <- b, c -> d all arcs are directed, the last one by Meek's first rule."""
+        a, b = rng.integers(0, 2, (2, 5000))
+        c = np.where(rng.random(5000) < 0.1, 1 - (a | b), a | b)
+        d = np.where(rng.random(5000) < 0.2, 1 - c, c)
+
+        graph = pc(dataset_of(np.stack([a, b, c, d], axis=1), [2] * 4))
+
+        assert graph.edges() == (("v0", "v2", "directed"), ("v1", "v2", "directed"), ("v2", "v3", "directed"))
+
+    def test_chain(self, rng: np.random.Generator) -> None:
+        """A chain comes back undirected."""
+        a = rng.integers(0, 3, 5000)
+        b = np.where(rng.random(5000) < 0.3, rng.integers(0, 3, 5000), a)
+        c = np.where(rng.random(5000) < 0.3, rng.integers(0, 3, 5000), b)
+
+        graph = pc(dataset_of(np.stack([a, b, c], axis=1), [3] * 3))
+
+        assert graph.edges() == (("v0", "v1", "undirected"), ("v1", "v2", "undirected"))
+
+    def test_random_networks(self) -> None:
+        """For 20 networks of 8 binary variables with effects of +-1.5 logits, 400,000 rows give the CPDAG.
+
+        Level 1e-6, so that some 100 tests of a true independence each hardly ever reject.
+        """
+        for seed in range(20):
+            rng = np.random.default_rng(seed)
+            network = logit_network(8, rng)
+            data = network.sample(400_000, rng=rng)
+
+            graph = pc(data, alpha=1e-6)
+
+            assert cpdag(network.graph) == graph
+
+
+def logit_network(p: int, rng: np.random.Generator) -> Network:
+    """Draw a DAG in which each parent shifts the log odds of its child by 1.5 up or down."""
+    names = tuple(f"v{j}" for j in range(p))
+    order = rng.permutation(p)
+    arcs, cpts = [], {}
+    for place, v in enumerate(order):
+        parents = rng.choice(order[:place], min(place, int(rng.integers(0, 3))), replace=False)
+        arcs += [(names[u], names[v]) for u in parents]
+        log_odds = np.zeros((2,) * len(parents))
+        for axis in range(len(parents)):
+            shift = rng.choice([-1.5, 1.5]) * np.array([-1.0, 1.0])
+            log_odds = log_odds + shift.reshape([2 if i == axis else 1 for i in range(len(parents))])
+        one = 1 / (1 + np.exp(-log_odds))
+        cpts[names[v]] = Cpt(names[v], tuple(names[u] for u in parents), np.stack([1 - one, one], axis=-1))
+    return Network(Graph.from_edges(names, arcs), (("0", "1"),) * p, cpts)
+
+
+class TestEdgeCases:
+    """Data of no help, or too large for any table."""
+
+    @pytest.mark.parametrize("n", [0, 1, 10])
+    @pytest.mark.parametrize("p", [1, 2, 5])
+    def test_few_rows_and_columns(self, n: int, p: int, rng: np.random.Generator) -> None:
+        """Independent columns of at most ten rows give no edge at 1e-6, which no such table reaches."""
+        data = dataset_of(rng.integers(0, 2, (n, p)), [2] * p)
+
+        assert pc(data, alpha=1e-6).n_edges == 0
+
+    def test_two_copies(self) -> None:
+        """Two identical columns are joined."""
+        column = np.arange(100) % 3
+
+        assert pc(dataset_of(np.stack([column, column], axis=1), [3, 3])).n_edges == 1
+
+    def test_three_copies(self) -> None:
+        """Of three copies each explains the other two: no edge is left."""
+        column = np.arange(100) % 3
+
+        assert pc(dataset_of(np.stack([column] * 3, axis=1), [3] * 3)).n_edges == 0
+
+    @pytest.mark.parametrize("min_per_cell", [0.0, 1e9])
+    def test_constants_have_no_edge(self, min_per_cell: float, rng: np.random.Generator) -> None:
+        """A variable of one state has no edge, whether tests can be made or not."""
+        codes = np.stack([np.zeros(50), rng.integers(0, 2, 50), np.zeros(50)], axis=1)
+
+        assert pc(dataset_of(codes, [1, 2, 1]), min_per_cell=min_per_cell).n_edges == 0
+
+    def test_untestable_pairs_keep_their_edge(self, rng: np.random.Generator) -> None:
+        """39 rows are too few for the 4 cells of a pair at 10 rows a cell, 40 are enough."""
+        codes = rng.integers(0, 2, (40, 6))
+
+        complete = pc(dataset_of(codes[:39], [2] * 6), min_per_cell=10.0)
+        tested = pc(dataset_of(codes, [2] * 6), min_per_cell=10.0, alpha=1e-9)
+
+        assert (complete.n_edges, complete.directed.any()) == (15, False)
+        assert tested.n_edges == 0
+
+    def test_untestable_sets_are_not_searched(self, rng: np.random.Generator) -> None:
+        """150 variables of which no test can be made end at once with the complete graph."""
+        data = dataset_of(rng.integers(0, 3, (20, 150)), [3] * 150)
+
+        assert pc(data, min_per_cell=100.0).n_edges == 150 * 149 // 2
+
+    def test_max_conditioning(self) -> None:
+        """0 conditions on nothing: the skeleton is that of the marginal tests."""
+        data = random_network(9, np.random.default_rng(3), mean_parents=2, concentration=1).sample(
+            2000, rng=np.random.default_rng(4)
+        )
+
+        graph = pc(data, max_conditioning=0)
+
+        assert np.array_equal(
+            plain_pc(data, 0.01, "g2", max_conditioning=0).adjacent, graph.arrow | graph.arrow.T
+        )
+        assert graph.n_edges > pc(data).n_edges
+
+    def test_many_unseen_states(self, rng: np.random.Generator) -> None:
+        """255 declared states of which 2 are seen cost power, never an error."""
+        hidden = rng.integers(0, 2, 3000)
+        noisy = np.where(rng.random((3000, 6)) < 0.1, rng.integers(0, 2, (3000, 6)), hidden[:, np.newaxis])
+
+        declared = pc(dataset_of(noisy, [255] * 6))
+        seen = pc(dataset_of(noisy, [2] * 6))
+
+        assert declared.n_edges == 0
+        assert seen.n_edges > 0
+
+    def test_states_without_number(self, rng: np.random.Generator) -> None:
+        """Columns in which every row has a state of its own need no table."""
+        codes = np.stack([rng.permutation(500) * 100 for _ in range(5)], axis=1)
+
+        assert pc(dataset_of(codes, [60_000] * 5)).n_edges == 0
+
+    def test_many_variables(self, rng: np.random.Generator) -> None:
+        """200 variables, some of 255 states, constant, copied or with states never seen, get an answer."""
+        codes = rng.integers(0, 2, (500, 200))
+        codes[:, 1:10] = codes[:, :1]
+        codes[:, 10:20] = 0
+        sizes = [255 if j % 7 == 0 else 1 if 10 <= j < 15 else 2 + j % 3 for j in range(200)]
+        codes[:, ::7] = rng.integers(0, 255, (500, 29))
+
+        graph = pc(dataset_of(codes, sizes))
+
+        assert graph.n_variables == 200
+
+    def test_data_unchanged(self, rng: np.random.Generator) -> None:
+        """The same data give the same answer again, and are left as they were."""
+        data = random_network(8, rng, mean_parents=2, concentration=1).sample(300, rng=rng)
+        before = data.codes.copy()
+
+        assert pc(data) == pc(data)
+        assert np.array_equal(before, data.codes)
