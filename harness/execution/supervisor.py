@@ -4,6 +4,10 @@ Started by the main process with one end of a connection as an open file. It nev
 itself, so nothing a learner does can keep it from watching. When the main process is gone, the
 connection ends, and it takes its runners with it; runners in turn die with it. On Linux it also adopts
 whatever a learner leaves behind, and ends it.
+
+Built-in learners are run by a *steady* runner, which lives on, draws for itself, and is asked for many
+runs at once. Anybody else's learner gets a runner of its own for one run, forked when network and
+dataset have been drawn here; its answer is scored here, where no stranger's code has been.
 """
 
 from __future__ import annotations
@@ -13,6 +17,7 @@ import gc
 import importlib
 import json
 import os
+import select
 import shutil
 import signal
 import sys
@@ -20,19 +25,21 @@ import tempfile
 import time
 from collections import deque
 from dataclasses import dataclass, field, replace
-from multiprocessing.connection import Connection, Pipe, wait
+from math import ceil, inf
+from multiprocessing.connection import Connection, Pipe
 from pathlib import Path
 from types import FrameType
 from typing import Any
 
 from generators import compiled
-from generators.graph import Graph
+from generators.errors import InputError
 from harness.execution import memory, processes
-from harness.execution.messages import Work
-from harness.execution.runner import fork_runner, outcome_from, serve_many, serve_one
+from harness.execution.messages import Work, drawn_from, outcome_fields, outcome_from, timed_from
+from harness.execution.one_run import Material, MaterialSource, scored
+from harness.execution.runner import fork_runner, serve_many, serve_one
 from harness.learners.builtin import built_in
 from harness.learners.sources import needs_isolation
-from harness.ledger.store import DrawnDataset, DrawnNetwork, now
+from harness.ledger.store import now
 from harness.records import Learner, Outcome, Status
 
 POLL_SECONDS = 0.03  # how often a running learner's memory is looked at
@@ -59,6 +66,7 @@ class _Runner:
 
     pid: int
     connection: Connection
+    poll: select.poll  # on the main process and the runner
     output: int
     folder: Path
     drawn: int | None = None  # the number of the work whose material it holds
@@ -97,6 +105,8 @@ class Supervisor:
         self._queue: deque[Work] = deque()
         self._stopping = False
         self._steady: _Runner | None = None
+        self._source = MaterialSource()
+        self._material: Material | None = None
         self._last_event = time.monotonic()
         # Imported here, once: runners are forked with everything loaded and compiled.
         for name in _PRELOADED:
@@ -146,21 +156,87 @@ class Supervisor:
 
     def _do(self, work: Work) -> None:
         self._last_event = time.monotonic()
-        names = self._draw(work).graph.names
-        for position in range(len(work.requests)):
-            if self._stopping:
-                return
-            started = now()
-            # A runner that is killed from outside is not the learner's doing: once more, then it is.
-            outcome = self._run(work, position, names) or self._run(work, position, names) or _KILLED_TWICE
-            outcome = _held_to_time(outcome, self._learners[work.requests[position].learner])
-            overhead = time.monotonic() - self._last_event - (outcome.wall_seconds or 0.0)
-            self._main.send(("ended", work.number, position, outcome, started, overhead))
-            self._last_event = time.monotonic()
+        at = 0
+        while at < len(work.requests) and not self._stopping:
+            if needs_isolation(self._learner_at(work, at)):
+                # A runner that is killed from outside is not the learner's doing: once more, then it is.
+                started = now()
+                outcome = self._run_alone(work, at) or self._run_alone(work, at) or _KILLED_TWICE
+                self._report(work, at, outcome_fields(outcome), started)
+                at += 1
+            else:
+                at = self._run_steadily(work, at)
 
-    def _draw(self, work: Work) -> DrawnNetwork:
+    def _learner_at(self, work: Work, position: int) -> Learner:
+        return self._learners[work.requests[position].learner]
+
+    def _run_steadily(self, work: Work, first: int) -> int:
+        """Have the runs of built-in learners done from one position on, and return where they end."""
+        end = first
+        while end < len(work.requests) and not needs_isolation(self._learner_at(work, end)):
+            end += 1
+        at, was_killed = first, False
+        while at < end:
+            runner = self._runner_with(work)
+            runner.ask("learn", at, end)
+            while at < end and not runner.ended:
+                if self._stopping:
+                    return end
+                started = now()
+                reply, outcome = self._watch(runner, self._learner_at(work, at))
+                if reply is None and outcome is None and not was_killed:
+                    was_killed = True
+                    continue
+                self._report(work, at, reply or outcome_fields(outcome or _KILLED_TWICE), started)
+                at, was_killed = at + 1, False
+        return end
+
+    def _run_alone(self, work: Work, position: int) -> Outcome | None:
+        learner = self._learner_at(work, position)
+        material = self._material_of(work)
+        runner = self._fork(serve_one(learner, material, position))
+        try:
+            reply, outcome = self._watch(runner, learner)
+        finally:
+            self._end(runner)
+        if reply is None:
+            return outcome
+        if reply["event"] == "outcome":
+            return outcome_from(reply, material.network.names)
+        return scored(material, learner, timed_from(reply, material.network.names))
+
+    def _report(self, work: Work, position: int, fields: dict[str, Any], started: str) -> None:
+        learner = self._learner_at(work, position)
+        if fields["status"] == Status.DONE and fields["wall_seconds"] > learner.limits.seconds:
+            # The learner's own clock judges, which starts and stops a little before ours.
+            fields = outcome_fields(replace(_over_time(learner), load=fields["load"]))
+        overhead = time.monotonic() - self._last_event - (fields["wall_seconds"] or 0.0)
+        self._main.send(("ended", work.number, position, fields, started, overhead))
+        self._last_event = time.monotonic()
+
+    # Networks and datasets --------------------------------------------------------------------------
+
+    def _material_of(self, work: Work) -> Material:
+        """Return the network and dataset of some work, drawn in this process for the runners to come."""
+        if self._material is None or self._material.work.number != work.number:
+            self._material = None
+            try:
+                self._material = self._source.draw(work)
+            except InputError as error:
+                raise _CannotDraw(str(error)) from None
+            self._main.send(
+                ("drawn", work.number, self._material.drawn_network, self._material.drawn_dataset)
+            )
+        return self._material
+
+    def _runner_with(self, work: Work) -> _Runner:
+        """Return the steady runner, holding the network and dataset of some work."""
         for _ in range(2):
-            runner = self._steady_runner()
+            if self._steady is None or self._steady.ended:
+                self._steady = self._fork(serve_many(self._learners, self._specifications))
+            runner = self._steady
+            if runner.drawn == work.number:
+                return runner
             runner.ask("draw", work)
             reply, _ = self._watch(runner, None)
             if reply is None:
@@ -168,39 +244,9 @@ class Supervisor:
             if reply["event"] == "cannot-draw":
                 raise _CannotDraw(reply["message"])
             runner.drawn = work.number
-            network, dataset = _drawn_from(work, reply)
-            self._main.send(("drawn", work.number, network, dataset))
-            return network
+            self._main.send(("drawn", work.number, *drawn_from(work, reply)))
+            return runner
         raise _CannotDraw("the process that draws networks and datasets died twice; is there memory enough?")
-
-    def _run(self, work: Work, position: int, names: tuple[str, ...]) -> Outcome | None:
-        learner = self._learners[work.requests[position].learner]
-        if needs_isolation(learner):
-            return self._run_alone(work, position, learner, names)
-        runner = self._runner_with(work)
-        runner.ask("learn", position)
-        reply, outcome = self._watch(runner, learner)
-        return outcome if reply is None else outcome_from(reply, names)
-
-    def _run_alone(
-        self, work: Work, position: int, learner: Learner, names: tuple[str, ...]
-    ) -> Outcome | None:
-        runner = self._fork(serve_one(learner, work, position))
-        try:
-            reply, outcome = self._watch(runner, learner)
-        finally:
-            self._end(runner)
-        if reply is None:
-            return outcome
-        if reply["event"] == "cannot-draw":
-            raise _CannotDraw(reply["message"])
-        if reply["event"] == "outcome":
-            return outcome_from(reply, names)
-        # Scored by a process that no stranger's code has touched.
-        judge = self._runner_with(work)
-        judge.ask("score", position, reply["timed"])
-        reply, outcome = self._watch(judge, None)
-        return outcome if reply is None else outcome_from(reply, names)
 
     # Watching ---------------------------------------------------------------------------------------
 
@@ -217,23 +263,22 @@ class Supervisor:
             Why it is gone; None if it was killed by neither itself nor us.
         """
         load = os.getloadavg()[0]
-        clocks = {} if learner is None else {"loading": LOADING_SECONDS, "calling": learner.limits.seconds}
-        phase, end = "", float("inf")
+        phase, limit, began = "calling", inf if learner is None else learner.limits.seconds, time.monotonic()
         while True:
-            left = end - time.monotonic()
+            left = began + limit - time.monotonic()
             if learner is not None and left <= 0:
                 return None, self._stop(runner, _over_time(learner, phase), load)
-            ready = wait([self._main, runner.connection], min(POLL_SECONDS, left))
-            if self._main in ready:
+            ready = [file for file, _ in runner.poll.poll(ceil(1000 * min(POLL_SECONDS, left)))]
+            if self._main.fileno() in ready:
                 self._take_message()
-            if runner.connection in ready:
+            if runner.connection.fileno() in ready:
                 reply = runner.answer()
                 if reply is None:
                     return None, self._obituary(runner, load)
-                if reply["event"] not in clocks:
+                phase, began = reply["event"], time.monotonic()
+                if learner is None or phase not in ("loading", "calling"):
                     return reply, None
-                phase = reply["event"]
-                end = time.monotonic() + clocks[phase]
+                limit = LOADING_SECONDS if phase == "loading" else learner.limits.seconds
             elif not ready:
                 # A child of the learner's may hold the connection open when the runner itself is gone.
                 if processes.has_exited(runner.pid) and not runner.connection.poll():
@@ -268,18 +313,6 @@ class Supervisor:
 
     # Runners ----------------------------------------------------------------------------------------
 
-    def _steady_runner(self) -> _Runner:
-        if self._steady is None or self._steady.ended:
-            self._steady = self._fork(serve_many(self._learners, self._specifications))
-        return self._steady
-
-    def _runner_with(self, work: Work) -> _Runner:
-        runner = self._steady_runner()
-        if runner.drawn != work.number:
-            self._draw(work)
-            runner = self._steady_runner()
-        return runner
-
     def _fork(self, main: Any) -> _Runner:
         ours, theirs = Pipe()
         folder = Path(tempfile.mkdtemp(dir=self._folder))
@@ -287,7 +320,10 @@ class Supervisor:
         os.unlink(folder / ".output")
         pid = fork_runner(main, theirs, output, folder)
         theirs.close()
-        return _Runner(pid, ours, output, folder)
+        poll = select.poll()
+        poll.register(self._main, select.POLLIN)
+        poll.register(ours, select.POLLIN)
+        return _Runner(pid, ours, poll, output, folder)
 
     def _end(self, runner: _Runner) -> int:
         """End a runner with all it started, and return its exit code (minus the signal, if killed)."""
@@ -340,23 +376,6 @@ def _over_time(learner: Learner, phase: str = "calling") -> Outcome:
         return Outcome(Status.ERROR, f"importing the learner took over {LOADING_SECONDS:g} s")
     seconds = learner.limits.seconds
     return Outcome(Status.TIMEOUT, f"over the limit of {seconds:g} s", wall_seconds=seconds)
-
-
-def _held_to_time(outcome: Outcome, learner: Learner) -> Outcome:
-    """Judge by the learner's own clock, which starts and stops a little before ours."""
-    if outcome.status == Status.DONE and (outcome.wall_seconds or 0.0) > learner.limits.seconds:
-        return replace(_over_time(learner), load=outcome.load)
-    return outcome
-
-
-def _drawn_from(work: Work, reply: dict[str, Any]) -> tuple[DrawnNetwork, DrawnDataset]:
-    names = tuple(reply["names"])
-    graph = Graph.from_edges(names, directed=[(names[i], names[j]) for i, j, _ in reply["edges"]])
-    network = DrawnNetwork(
-        work.network_key, work.networks, work.replicate, graph, bytes.fromhex(reply["cpts_digest"])
-    )
-    view_digest = bytes.fromhex(reply["view_digest"])
-    return network, DrawnDataset(work.dataset_key, work.index, reply["distortions"], view_digest)
 
 
 def _signal_name(number: int) -> str:

@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from generators.compiled import kernel
-from generators.dataset import MAX_TABLE_CELLS, Dataset, code_dtype
+from generators.dataset import MAX_TABLE_CELLS, Codes, Dataset, code_dtype
 from generators.errors import InputError
 from harness import counts
 from harness.counts import Columns, Workspace, count, count_plain, prepare, workspace
@@ -220,9 +220,9 @@ def test_a_base_holds_the_joint_states_that_occur(case: tuple[list[int], int, in
 def test_huge_products_of_states_cost_no_more_than_the_rows(states: int) -> None:
     """With ten variables of very many states, joint states are still numbered exactly, in linear memory."""
     rng = np.random.default_rng(6)
-    patterns = rng.integers(0, states, (40, 10)).astype(code_dtype(states))
+    patterns = rng.integers(0, states, (40, 10))
     patterns[1::2, :9] = patterns[::2, :9]  # pairs that differ in the last variable only, or not at all
-    codes = patterns[rng.integers(0, 40, 500)]
+    codes: Codes = patterns[rng.integers(0, 40, 500)].astype(code_dtype(states))
     names = tuple(f"v{j}" for j in range(10))
     data = Dataset(names, (tuple(map(str, range(states))),) * 10, codes)
     columns = prepare(data)
