@@ -291,31 +291,44 @@ def dependent_pairs(
     return statistics > limits[np.ix_(kind, kind)]
 
 
-def statistic_given(columns: Columns, x: int, y: int, given: Sequence[int], test: Test = "g2") -> float:
-    """Compute the statistic of two variables, conditioned on others.
+def conditional_statistics(
+    columns: Columns,
+    pairs: Sequence[tuple[int, int]],
+    given: Sequence[Sequence[int]],
+    test: Test = "g2",
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Compute the statistics of pairs of variables, each conditioned on others of its own.
 
     Parameters
     ----------
     columns : Columns
-    x, y : int
+    pairs : sequence of (int, int)
         Positions of two different variables.
-    given : sequence of int
-        Positions of other variables.
+    given : sequence of sequences of int
+        For each pair, positions of other variables.
     test : {"g2", "pearson"}
 
     Returns
     -------
-    float
-        What `independence_test` gives for the table over `given`, `x` and `y`, which may be of any size.
+    statistic : float64 array, shape (m,)
+        What `independence_test` gives for the tables over the given variables and the pair, which may be
+        of any size.
+    df : float64 array, shape (m,)
+        Nominal degrees of freedom.
 
     Examples
     --------
     >>> data = Dataset(("a", "b"), (("0", "1"), ("0", "1")), np.array([[0, 0], [1, 1]] * 5, dtype=np.uint8))
-    >>> statistic_given(prepare(data), 0, 1, [], "pearson")
-    10.0
+    >>> statistic, df = conditional_statistics(prepare(data), [(0, 1)], [()], "pearson")
+    >>> statistic.tolist(), df.tolist()
+    ([10.0], [1.0])
     """
-    variables = np.array(given, dtype=np.int64)
-    return float(_statistic_given(columns, variables, x, y, statistic_workspace(columns), test == "pearson"))
+    ends = np.cumsum([len(own) for own in given], dtype=np.int64)
+    variables = np.array([v for own in given for v in own], dtype=np.int64)
+    questions = np.array(pairs, dtype=np.int64).reshape(-1, 2)
+    return _conditional_statistics(
+        columns, questions, ends, variables, statistic_workspace(columns), test == "pearson"
+    )
 
 
 # What learners compile into their loops ---------------------------------------------------------------
@@ -495,11 +508,27 @@ def _statistic_by_row(
 
 
 @kernel
-def _statistic_given(
-    columns: Columns, given: NDArray[np.int64], x: int, y: int, work: StatisticWorkspace, is_pearson: bool
-) -> float:
-    work.parts[:] = 0
-    return conditional_statistic(columns, given, x, y, work, is_pearson)
+def _conditional_statistics(
+    columns: Columns,
+    pairs: NDArray[np.int64],
+    ends: NDArray[np.int64],
+    variables: NDArray[np.int64],
+    work: StatisticWorkspace,
+    is_pearson: bool,
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    n_pairs = pairs.shape[0]
+    statistic, df = np.empty(n_pairs), np.empty(n_pairs)
+    start = 0
+    for k in range(n_pairs):
+        x, y = pairs[k, 0], pairs[k, 1]
+        given = variables[start : ends[k]]
+        start = ends[k]
+        work.parts[:] = 0
+        statistic[k] = conditional_statistic(columns, given, x, y, work, is_pearson)
+        df[k] = (columns.cardinalities[x] - 1) * (columns.cardinalities[y] - 1)
+        for v in given:
+            df[k] *= columns.cardinalities[v]
+    return statistic, df
 
 
 @kernel
@@ -559,5 +588,5 @@ def _ceilings(columns: Columns, is_pearson: bool) -> NDArray[np.float64]:
 def _compile() -> None:
     columns = prepare(Dataset(("a", "b", "c"), (("0", "1"),) * 3, np.zeros((2, 3), dtype=np.uint8)))
     statistic_ceilings(columns, "g2")
-    statistic_given(columns, 0, 1, [2])
+    conditional_statistics(columns, [(0, 1)], [[2]])
     pair_statistics(columns)

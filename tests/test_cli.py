@@ -23,6 +23,7 @@ method = "no-arcs"
 method = "hill-climbing"
 [[learner]]
 method = "pc"
+label = "pc"
 alpha = 0.05
 [requirement]
 bounds = ["skeleton_recall >= 0.5"]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import os
 import secrets
+import select
 import shutil
 import socket
 import subprocess
@@ -14,12 +15,13 @@ import time
 from collections import deque
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
-from multiprocessing.connection import Connection, wait
+from math import ceil
+from multiprocessing.connection import Connection
 from pathlib import Path
 from typing import IO, Any
 
 from generators.errors import InputError
-from harness.execution.messages import Drawn, Ended, Event, Work
+from harness.execution.messages import Drawn, Ended, Event, Work, outcome_from
 from harness.execution.processes import end_marked
 from harness.records import Learner, MachineStop
 
@@ -40,7 +42,8 @@ from harness.execution.supervisor import main
 main(int(sys.argv[2]), int(sys.argv[3]))
 """
 WORK_AHEAD = 2  # pieces of work per worker, so that none waits for the main process
-MAX_BATCH = 200  # events handed back at once: what one commit of the ledger holds
+MAX_BATCH = 500  # events handed back at once: what one commit of the ledger holds
+GATHER_SECONDS = 0.1  # from the first of them: what kill -9 may cost, to be done again
 LOOK_SECONDS = 0.2  # how soon a wish to stop is noticed
 END_SECONDS = 5.0  # for a supervisor to end its runners
 MAX_DEATHS = 5
@@ -59,6 +62,7 @@ class _Worker:
     is_over: bool = False
     open_work: dict[int, Work] = field(default_factory=dict)
     ended: dict[int, set[int]] = field(default_factory=dict)
+    names: dict[int, tuple[str, ...]] = field(default_factory=dict)
 
 
 class LocalEngine:
@@ -132,24 +136,37 @@ class LocalEngine:
                 self._tell_to_stop()
             if not told_to_stop:
                 self._hand_out(source)
-            live = [worker for worker in self._workers if not worker.is_over]
-            if (self._is_exhausted or told_to_stop) and not any(worker.open_work for worker in live):
+            if (self._is_exhausted or told_to_stop) and not self._is_working():
                 return
-            batch: list[Event] = []
-            end = time.monotonic() + LOOK_SECONDS
-            while len(batch) < MAX_BATCH:
-                patience = max(0.0, end - time.monotonic()) if not batch else 0.0
-                ready = wait([worker.connection for worker in live if not worker.is_over], patience)
-                if not ready:
-                    break
-                for worker in live:
-                    if worker.connection in ready:
-                        batch += self._read(worker, on_ready)
-                if not told_to_stop:
-                    self._hand_out(source)
-            yield batch
+            yield self._gather(source, on_ready)
             if self._fault is not None:
                 raise self._fault
+
+    def _is_working(self) -> bool:
+        return any(worker.open_work for worker in self._workers if not worker.is_over)
+
+    def _gather(self, source: Iterator[Work], on_ready: Callable[[], None] | None) -> list[Event]:
+        """Return what happens within a short while of the first event; nothing if none comes soon."""
+        live = {worker.connection.fileno(): worker for worker in self._workers if not worker.is_over}
+        poll = select.poll()
+        for file in live:
+            poll.register(file, select.POLLIN)
+        batch: list[Event] = []
+        end = time.monotonic() + LOOK_SECONDS
+        while len(batch) < MAX_BATCH:
+            ready = poll.poll(ceil(1000 * max(0.0, end - time.monotonic())))
+            for file, _ in ready:
+                events = self._read(live[file], on_ready)
+                if events and not batch:
+                    end = time.monotonic() + GATHER_SECONDS
+                batch += events
+                if live[file].is_over:
+                    poll.unregister(file)
+            if not ready or not self._is_working():
+                break
+            if not self._is_stopping:
+                self._hand_out(source)
+        return batch
 
     def _hand_out(self, source: Iterator[Work]) -> None:
         for worker in self._workers:
@@ -172,12 +189,14 @@ class LocalEngine:
         word, *rest = message
         if word == "drawn":
             number, network, dataset = rest
+            worker.names[number] = network.graph.names
             return [Drawn(worker.open_work[number], network, dataset)]
         if word == "ended":
-            number, position, outcome, started, overhead = rest
+            number, position, fields, started, overhead = rest
             worker.ended[number].add(position)
             self._deaths = 0
             work = worker.open_work[number]
+            outcome = outcome_from(fields, worker.names[number])
             return [Ended(work, work.requests[position], outcome, started, overhead)]
         self._note(worker, word, rest, on_ready)
         return []
@@ -190,7 +209,8 @@ class LocalEngine:
                 if on_ready is not None:
                     on_ready()
         elif word == "finished":
-            del worker.open_work[rest[0]], worker.ended[rest[0]]
+            for kept in (worker.open_work, worker.ended, worker.names):
+                kept.pop(rest[0], None)
         elif word == "stopped":
             worker.is_over = True
             worker.open_work.clear()

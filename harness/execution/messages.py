@@ -6,8 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from harness.ledger.store import DrawnDataset, DrawnNetwork
-from harness.records import Outcome
+from harness.ledger.store import DrawnDataset, DrawnNetwork, edge_positions, graph_of
+from harness.records import Outcome, Status
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,3 +60,41 @@ class Ended:
 
 
 Event = Drawn | Ended
+
+_PLAIN = (
+    "status",
+    "cause",
+    "extendable",
+    "measures",
+    "undefined",
+    "wall_seconds",
+    "cpu_seconds",
+    "peak_rss_mb",
+    "load",
+)
+
+
+def outcome_fields(outcome: Outcome) -> dict[str, Any]:
+    """Return what JSON can hold of an outcome."""
+    fields = {name: getattr(outcome, name) for name in _PLAIN}
+    return {**fields, "edges": None if outcome.graph is None else edge_positions(outcome.graph)}
+
+
+def outcome_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Outcome:
+    """Rebuild an outcome from its JSON form, over the variables `names`."""
+    plain = {name: fields[name] for name in _PLAIN}
+    graph = None if fields["edges"] is None else graph_of(fields["edges"], names)
+    return Outcome(**{**plain, "status": Status(fields["status"]), "graph": graph})
+
+
+def drawn_from(work: Work, fields: Mapping[str, Any]) -> tuple[DrawnNetwork, DrawnDataset]:
+    """Rebuild what a runner says that it has drawn."""
+    network = DrawnNetwork(
+        work.network_key,
+        work.networks,
+        work.replicate,
+        graph_of(fields["edges"], tuple(fields["names"])),
+        bytes.fromhex(fields["cpts_digest"]),
+    )
+    view_digest = bytes.fromhex(fields["view_digest"])
+    return network, DrawnDataset(work.dataset_key, work.index, fields["distortions"], view_digest)

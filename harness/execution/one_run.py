@@ -8,7 +8,7 @@ import resource
 import statistics
 import time
 import traceback
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -22,7 +22,7 @@ from generators.streams import canonical_json, digest
 from harness.execution import memory
 from harness.execution.messages import Request, Work
 from harness.learners.specification import InvalidAnswer, Specification, call
-from harness.ledger.store import DrawnDataset, DrawnNetwork
+from harness.ledger.store import DrawnDataset, DrawnNetwork, edge_positions, graph_of
 from harness.plan.recipes import draw_network, draw_view, learner_rng
 from harness.records import Answer, Declined, Learner, Outcome, Status
 from harness.scorers.structure import score_answer
@@ -71,6 +71,20 @@ class Timed:
     load: float
 
 
+_CLOCKED = ("wall_seconds", "cpu_seconds", "peak_rss_mb", "load")
+
+
+def timed_fields(timed: Timed) -> dict[str, Any]:
+    """Return what JSON can hold of a timed answer."""
+    fields = {name: getattr(timed, name) for name in _CLOCKED}
+    return {**fields, "edges": edge_positions(timed.graph)}
+
+
+def timed_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Timed:
+    """Rebuild a timed answer from its JSON form."""
+    return Timed(graph_of(fields["edges"], names), **{name: fields[name] for name in _CLOCKED})
+
+
 class MaterialSource:
     """Draws the material of work, keeping the last network, which the next dataset may share."""
 
@@ -97,16 +111,18 @@ def timed_call(specification: Specification, material: Material, request: Reques
     the first answer is the answer, also of a learner that cannot be called again.
     """
     data = material.masked.first(request.rows)
-    fresh_rng = _rng_source(material.work.dataset_key, request.rows)
+    rng = learner_rng(material.work.dataset_key, request.rows)
+    beginning = rng.bit_generator.state
     load = os.getloadavg()[0]
     memory.reset_peak()
-    answer, wall, cpu = _clocked(specification, data, request.settings, fresh_rng())
+    answer, wall, cpu = _clocked(specification, data, request.settings, rng)
     peak = memory.peak_mb()
     walls, cpus = [wall], [cpu]
     if wall < REPEAT_BELOW_SECONDS:
         with contextlib.suppress(Exception):
             for _ in range(CALLS_WHEN_SHORT - 1):
-                _, wall, cpu = _clocked(specification, data, request.settings, fresh_rng())
+                rng.bit_generator.state = beginning
+                _, wall, cpu = _clocked(specification, data, request.settings, rng)
                 walls.append(wall)
                 cpus.append(cpu)
     graph = material.view.unmask(answer.graph, material.network.names)
@@ -154,10 +170,6 @@ def _text_of(error: BaseException) -> str:
 def _plain(text: str) -> str:
     """Shorten a stranger's text, and leave out what a file of UTF-8 text cannot hold."""
     return text[:MAX_CAUSE_CHARACTERS].encode("utf-8", "replace").decode().replace("\0", "?").strip()
-
-
-def _rng_source(dataset_key: bytes, rows: int) -> Callable[[], np.random.Generator]:
-    return lambda: learner_rng(dataset_key, rows)
 
 
 def _clocked(

@@ -7,7 +7,6 @@ back as JSON, since in a one-run process a stranger's code shares the memory.
 from __future__ import annotations
 
 import contextlib
-import json
 import os
 import resource
 import signal
@@ -19,16 +18,15 @@ from pathlib import Path
 from typing import Any
 
 from generators.errors import InputError
-from generators.graph import Graph
 from generators.streams import canonical_json
 from harness.execution.memory import MEBIBYTE
-from harness.execution.messages import Work
-from harness.execution.one_run import Material, MaterialSource, Timed, failed, scored, timed_call
+from harness.execution.messages import Request, Work, outcome_fields
+from harness.execution.one_run import Material, MaterialSource, failed, scored, timed_call, timed_fields
 from harness.execution.processes import die_with_parent
 from harness.learners.sources import folder_of, load, own_folder
 from harness.learners.specification import Specification
-from harness.ledger.store import graph_text
-from harness.records import Learner, Outcome, Status
+from harness.ledger.store import edge_positions
+from harness.records import Learner, Outcome
 
 _CONNECTION_FILE = 3
 _MANY_FILES = 1 << 16  # where their number is not limited
@@ -92,96 +90,42 @@ def serve_many(
                 material = _draw(connection, source, arguments[0])
                 continue
             assert material is not None
-            request = material.work.requests[arguments[0]]
-            learner = learners[request.learner]
-            if command == "learn":
-                _send(connection, event="calling")
-                try:
-                    outcome = scored(
-                        material, learner, timed_call(specifications[request.learner], material, request)
-                    )
-                except Exception as error:
-                    outcome = failed(error)
-            else:
-                outcome = scored(material, learner, _timed_from(arguments[1], material.network.names))
-            _send(connection, event="outcome", **_outcome_fields(outcome))
+            for request in material.work.requests[slice(*arguments)]:
+                outcome = _outcome_of(
+                    specifications[request.learner], learners[request.learner], material, request
+                )
+                _send(connection, event="outcome", **outcome_fields(outcome))
 
     return main
 
 
-def serve_one(learner: Learner, work: Work, position: int) -> Callable[[Connection], None]:
+def serve_one(learner: Learner, material: Material, position: int) -> Callable[[Connection], None]:
     """Return the main function of a runner that calls somebody's learner once."""
 
     def main(connection: Connection) -> None:
-        try:
-            material = MaterialSource().draw(work)
-        except InputError as error:
-            _send(connection, event="cannot-draw", message=str(error))
-            return
         _bound_address_space(learner.limits.memory_mb)
         try:
-            _send(connection, event="loading")
             with own_folder(folder_of(learner)):
                 specification = load(learner)
                 _send(connection, event="calling")
-                timed = timed_call(specification, material, work.requests[position])
+                timed = timed_call(specification, material, material.work.requests[position])
         except BaseException as error:
             # A learner's way of ending is a status, whatever it is.
-            _send(connection, event="outcome", **_outcome_fields(failed(error)))
+            _send(connection, event="outcome", **outcome_fields(failed(error)))
         else:
-            _send(connection, event="learned", timed=_timed_fields(timed))
+            _send(connection, event="learned", **timed_fields(timed))
 
     return main
 
 
-def outcome_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Outcome:
-    """Rebuild an outcome from its JSON form."""
-    edges = fields["edges"]
-    graph = None if edges is None else _graph_from(edges, names)
-    plain = {name: fields[name] for name in _PLAIN_FIELDS}
-    return Outcome(**{**plain, "status": Status(fields["status"]), "graph": graph})
-
-
-_PLAIN_FIELDS = (
-    "status",
-    "cause",
-    "extendable",
-    "measures",
-    "undefined",
-    "wall_seconds",
-    "cpu_seconds",
-    "peak_rss_mb",
-    "load",
-)
-
-
-def _outcome_fields(outcome: Outcome) -> dict[str, Any]:
-    fields = {name: getattr(outcome, name) for name in _PLAIN_FIELDS}
-    fields["edges"] = None if outcome.graph is None else json.loads(graph_text(outcome.graph))
-    return fields
-
-
-def _timed_fields(timed: Timed) -> dict[str, Any]:
-    return {
-        "edges": json.loads(graph_text(timed.graph)),
-        "wall_seconds": timed.wall_seconds,
-        "cpu_seconds": timed.cpu_seconds,
-        "peak_rss_mb": timed.peak_rss_mb,
-        "load": timed.load,
-    }
-
-
-def _timed_from(fields: Mapping[str, Any], names: tuple[str, ...]) -> Timed:
-    rest = {name: value for name, value in fields.items() if name != "edges"}
-    return Timed(graph=_graph_from(fields["edges"], names), **rest)
-
-
-def _graph_from(edges: list[list[int]], names: tuple[str, ...]) -> Graph:
-    return Graph.from_edges(
-        names,
-        directed=[(names[i], names[j]) for i, j, kind in edges if kind],
-        undirected=[(names[i], names[j]) for i, j, kind in edges if not kind],
-    )
+def _outcome_of(
+    specification: Specification, learner: Learner, material: Material, request: Request
+) -> Outcome:
+    try:
+        timed = timed_call(specification, material, request)
+    except Exception as error:
+        return failed(error)
+    return scored(material, learner, timed)
 
 
 def _draw(connection: Connection, source: MaterialSource, work: Work) -> Material | None:
@@ -195,7 +139,7 @@ def _draw(connection: Connection, source: MaterialSource, work: Work) -> Materia
         connection,
         event="drawn",
         names=network.graph.names,
-        edges=json.loads(graph_text(network.graph)),
+        edges=edge_positions(network.graph),
         cpts_digest=network.cpts_digest,
         view_digest=dataset.view_digest,
         distortions=dataset.distortions,

@@ -34,8 +34,8 @@ from typing import Any
 from generators import compiled
 from generators.errors import InputError
 from harness.execution import memory, processes
-from harness.execution.messages import Work, drawn_from, outcome_fields, outcome_from, timed_from
-from harness.execution.one_run import Material, MaterialSource, scored
+from harness.execution.messages import Work, drawn_from, outcome_fields, outcome_from
+from harness.execution.one_run import Material, MaterialSource, scored, timed_from
 from harness.execution.runner import fork_runner, serve_many, serve_one
 from harness.learners.builtin import built_in
 from harness.learners.sources import needs_isolation
@@ -203,7 +203,11 @@ class Supervisor:
             return outcome
         if reply["event"] == "outcome":
             return outcome_from(reply, material.network.names)
-        return scored(material, learner, timed_from(reply, material.network.names))
+        try:
+            timed = timed_from(reply, material.network.names)
+        except (KeyError, TypeError, ValueError, IndexError):
+            return Outcome(Status.INVALID, "what the learner's process sent is no answer")
+        return scored(material, learner, timed)
 
     def _report(self, work: Work, position: int, fields: dict[str, Any], started: str) -> None:
         learner = self._learner_at(work, position)
@@ -263,11 +267,13 @@ class Supervisor:
             Why it is gone; None if it was killed by neither itself nor us.
         """
         load = os.getloadavg()[0]
-        phase, limit, began = "calling", inf if learner is None else learner.limits.seconds, time.monotonic()
+        # A built-in learner is called at once; a stranger's is imported first, and says when it is called.
+        is_called = learner is not None and not needs_isolation(learner)
+        began = time.monotonic()
         while True:
-            left = began + limit - time.monotonic()
+            left = began + _time_allowed(learner, is_called) - time.monotonic()
             if learner is not None and left <= 0:
-                return None, self._stop(runner, _over_time(learner, phase), load)
+                return None, self._stop(runner, _over_time(learner, is_called), load)
             ready = [file for file, _ in runner.poll.poll(ceil(1000 * min(POLL_SECONDS, left)))]
             if self._main.fileno() in ready:
                 self._take_message()
@@ -275,10 +281,9 @@ class Supervisor:
                 reply = runner.answer()
                 if reply is None:
                     return None, self._obituary(runner, load)
-                phase, began = reply["event"], time.monotonic()
-                if learner is None or phase not in ("loading", "calling"):
+                if reply["event"] != "calling":
                     return reply, None
-                limit = LOADING_SECONDS if phase == "loading" else learner.limits.seconds
+                is_called, began = True, time.monotonic()
             elif not ready:
                 # A child of the learner's may hold the connection open when the runner itself is gone.
                 if processes.has_exited(runner.pid) and not runner.connection.poll():
@@ -371,8 +376,14 @@ _KILLED_TWICE = Outcome(
 )
 
 
-def _over_time(learner: Learner, phase: str = "calling") -> Outcome:
-    if phase == "loading":
+def _time_allowed(learner: Learner | None, is_called: bool) -> float:
+    if learner is None:
+        return inf
+    return learner.limits.seconds if is_called else LOADING_SECONDS
+
+
+def _over_time(learner: Learner, is_called: bool = True) -> Outcome:
+    if not is_called:
         return Outcome(Status.ERROR, f"importing the learner took over {LOADING_SECONDS:g} s")
     seconds = learner.limits.seconds
     return Outcome(Status.TIMEOUT, f"over the limit of {seconds:g} s", wall_seconds=seconds)

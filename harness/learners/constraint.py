@@ -37,6 +37,7 @@ from harness.independence import (
     Test,
     attainable_critical_values,
     conditional_statistic,
+    conditional_statistics,
     critical_value,
     dependent_pairs,
     pair_statistics,
@@ -143,7 +144,12 @@ class Skeleton(NamedTuple):
 
     def separator(self, x: int, y: int) -> tuple[int, ...]:
         """Return the variables that separated two that are not adjacent, in the order they were taken."""
-        return tuple(_separator(self.separators, min(x, y) * len(self.adjacent) + max(x, y)).tolist())
+        known = self.separators
+        pair = min(x, y) * len(self.adjacent) + max(x, y)
+        k = int(np.searchsorted(known.pair, pair))
+        if k == len(known.pair) or known.pair[k] != pair:
+            return ()
+        return tuple(known.variables[known.start[k] : known.end[k]].tolist())
 
 
 def find_skeleton(
@@ -230,9 +236,8 @@ def find_colliders(columns: Columns, skeleton: Skeleton, test: Test) -> NDArray[
     both = into & into.T
     is_contested = both[colliders[:, 0], colliders[:, 1]] | both[colliders[:, 2], colliders[:, 1]]
     contested = colliders[is_contested]
-    statistic, df = _collider_statistics(
-        columns, contested, skeleton.separators, statistic_workspace(columns), test == "pearson"
-    )
+    given = [(*skeleton.separator(x, y), z) for x, z, y in contested.tolist()]
+    statistic, df = conditional_statistics(columns, contested[:, ::2].tolist(), given, test)
     statistic = np.round(statistic, DECIMALS)
     order = np.lexsort((-statistic, chdtrc(df, statistic)))
     return np.concatenate([colliders[~is_contested], contested[order]])
@@ -327,10 +332,17 @@ def _separate(
 
 @inlined
 def _strongest_first(neighbours: Nodes, statistics: NDArray[np.float64]) -> Nodes:
+    # By insertion: neighbours are few, and numba's argsort takes seconds to compile.
+    ordered = np.empty_like(neighbours)
     strength = np.empty(neighbours.shape[0])
     for i in range(neighbours.shape[0]):
-        strength[i] = -np.round(statistics[neighbours[i]], DECIMALS)
-    return neighbours[np.argsort(strength, kind="mergesort")]
+        own = np.round(statistics[neighbours[i]], DECIMALS)
+        j = i
+        while j > 0 and strength[j - 1] < own:
+            ordered[j], strength[j] = ordered[j - 1], strength[j - 1]
+            j -= 1
+        ordered[j], strength[j] = neighbours[i], own
+    return ordered
 
 
 @inlined
@@ -389,19 +401,6 @@ def _next_combination(chosen: NDArray[np.int64], last: int, n: int) -> int:
     return j
 
 
-@inlined
-def _separating(separators: Separators, pair: int) -> NDArray[np.int64]:
-    k = np.searchsorted(separators.pair, pair)
-    if k == separators.pair.shape[0] or separators.pair[k] != pair:
-        return separators.variables[:0]
-    return separators.variables[separators.start[k] : separators.end[k]]
-
-
-@kernel
-def _separator(separators: Separators, pair: int) -> NDArray[np.int64]:
-    return _separating(separators, pair)
-
-
 @kernel
 def _find_colliders(adjacent: NDArray[np.bool_], separators: Separators) -> NDArray[np.int64]:
     # Rows (x, z, y) with x - z - y, x < y, x and y not adjacent, and z not among what separated them.
@@ -416,37 +415,18 @@ def _find_colliders(adjacent: NDArray[np.bool_], separators: Separators) -> NDAr
             for y in neighbours[i + 1 :]:
                 if adjacent[x, y]:
                     continue
+                pair = np.int64(x) * p + y
+                k = np.searchsorted(separators.pair, pair)
                 is_explained = False
-                for v in _separating(separators, np.int64(x) * p + y):
-                    is_explained |= v == z
+                if k < separators.pair.shape[0] and separators.pair[k] == pair:
+                    for v in separators.variables[separators.start[k] : separators.end[k]]:
+                        is_explained |= v == z
                 if not is_explained:
                     if n == colliders.shape[0]:
                         colliders = np.concatenate((colliders, np.empty_like(colliders)))
                     colliders[n, 0], colliders[n, 1], colliders[n, 2] = x, z, y
                     n += 1
     return colliders[:n].copy()
-
-
-@kernel
-def _collider_statistics(
-    columns: Columns,
-    colliders: NDArray[np.int64],
-    separators: Separators,
-    work: StatisticWorkspace,
-    is_pearson: bool,
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    # Statistic and degrees of freedom of x and y given what separated them and z.
-    n, p = colliders.shape[0], columns.codes.shape[0]
-    statistics, df = np.empty(n), np.empty(n)
-    for k in range(n):
-        x, z, y = colliders[k]
-        given = np.append(_separating(separators, x * p + y), z)
-        work.parts[:] = 0
-        statistics[k] = conditional_statistic(columns, given, x, y, work, is_pearson)
-        df[k] = (columns.cardinalities[x] - 1) * (columns.cardinalities[y] - 1)
-        for v in given:
-            df[k] *= columns.cardinalities[v]
-    return statistics, df
 
 
 @kernel

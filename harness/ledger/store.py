@@ -18,6 +18,8 @@ from pathlib import Path
 from types import TracebackType
 from typing import Any
 
+import numpy as np
+
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.streams import canonical_json
@@ -413,7 +415,7 @@ class Ledger:
         known = self._ids.get(("network", network.key))
         if known is not None:
             return known
-        graph = canonical_json({"names": network.graph.names, "edges": json.loads(graph_text(network.graph))})
+        graph = canonical_json({"names": network.graph.names, "edges": edge_positions(network.graph)})
         row = self._execute(
             "SELECT id, graph, cpts_digest FROM network WHERE key = ?", (network.key,)
         ).fetchone()
@@ -456,8 +458,6 @@ class Ledger:
         return found
 
     def _redraw_message(self, what: str) -> str:
-        import numpy as np
-
         earlier = [session["versions"].get("numpy", "?") for session in self.sessions()[:1]]
         return (
             f"{self.path}: {what} is drawn differently today (numpy {np.__version__}) than when the ledger "
@@ -475,11 +475,27 @@ class Ledger:
         return self._connection.execute(query, values)
 
 
+def edge_positions(graph: Graph) -> list[list[int]]:
+    """Return a graph's edges over positions: [[i, j, 1 directed or 0 undirected], ...], in a fixed order."""
+    undirected = graph.undirected
+    sources, targets = np.nonzero(graph.arrow & ~np.tril(undirected))
+    kinds = 1 - undirected[sources, targets]
+    return [list(edge) for edge in zip(sources.tolist(), targets.tolist(), kinds.tolist(), strict=True)]
+
+
+def graph_of(edges: Sequence[Sequence[int]], names: tuple[str, ...]) -> Graph:
+    """Return the graph of which `edge_positions` are given."""
+    arrow = np.zeros((len(names), len(names)), dtype=np.bool_)
+    for i, j, is_directed in edges:
+        arrow[i, j] = True
+        if not is_directed:
+            arrow[j, i] = True
+    return Graph(names, arrow)
+
+
 def graph_text(graph: Graph) -> str:
-    """Return a graph's edges as JSON over positions: [[i, j, 1 directed or 0 undirected], ...]."""
-    position = {name: i for i, name in enumerate(graph.names)}
-    edges = [[position[a], position[b], int(kind == "directed")] for a, b, kind in graph.edges()]
-    return canonical_json(edges)
+    """Return a graph's edges as JSON over positions, as the ledger stores them."""
+    return canonical_json(edge_positions(graph))
 
 
 def named_edges(text: str, names: Sequence[str]) -> list[list[str]]:

@@ -20,7 +20,7 @@ class Measure:
     needs : str
         What it is computed from: "graph", the true and the learned graph, or "run", the learner's call.
     reference : str
-        Author and year; empty for what needs none.
+        Author and year; "common practice" where it has no source of its own.
     summary : str
         One line.
     """
@@ -63,7 +63,7 @@ _IN_ORDER = (
         "share",
         "higher",
         "graph",
-        "",
+        "common practice",
         "Share of the learned adjacencies that are true.",
     ),
     Measure(
@@ -71,7 +71,7 @@ _IN_ORDER = (
         "share",
         "higher",
         "graph",
-        "",
+        "common practice",
         "Share of the true adjacencies that were learned.",
     ),
     Measure(
@@ -87,7 +87,7 @@ _IN_ORDER = (
         "share",
         "higher",
         "graph",
-        "",
+        "common practice",
         "Share of the directed edges of the learned class that the true class has.",
     ),
     Measure(
@@ -95,7 +95,7 @@ _IN_ORDER = (
         "share",
         "higher",
         "graph",
-        "",
+        "common practice",
         "Share of the directed edges of the true class that the learned class has.",
     ),
     Measure(
@@ -138,9 +138,18 @@ _IN_ORDER = (
         "Pearl 1988",
         "Whether the learned graph is Markov equivalent to the true DAG.",
     ),
-    Measure("wall_seconds", "s", "lower", "run", "", "Wall time of the learner's own call."),
-    Measure("cpu_seconds", "s", "lower", "run", "", "Processor time of the learner's own call."),
-    Measure("peak_rss_mb", "MiB", "lower", "run", "", "Peak resident memory during the learner's own call."),
+    Measure("wall_seconds", "s", "lower", "run", "common practice", "Wall time of the learner's own call."),
+    Measure(
+        "cpu_seconds", "s", "lower", "run", "common practice", "Processor time of the learner's own call."
+    ),
+    Measure(
+        "peak_rss_mb",
+        "MiB",
+        "lower",
+        "run",
+        "common practice",
+        "Peak resident memory during the learner's own call.",
+    ),
 )
 
 MEASURES: Mapping[str, Measure] = MappingProxyType({measure.name: measure for measure in _IN_ORDER})

@@ -243,7 +243,7 @@ class TestExactPower:
         rng = np.random.default_rng(n)
         power = exact_power(n, w, alpha)
         cells = np.array([[0, 0], [0, 1], [1, 0], [1, 1]], dtype=np.uint8)
-        tables = rng.multinomial(n, np.array([1 + w, 1 - w, 1 - w, 1 + w]) / 4, 3000)
+        tables = rng.multinomial(n, np.array([1 + w, 1 - w, 1 - w, 1 + w]) / 4, 2000)
 
         n_edges = sum(
             pc(dataset_of(np.repeat(cells, table, axis=0), [2, 2]), alpha=alpha).n_edges for table in tables
@@ -299,7 +299,7 @@ class TestBerkeley:
         assert is_kept == (frozenset(("sex", "admission")) in edges)
         assert frozenset(("department", "sex")) in edges
         assert frozenset(("department", "admission")) in edges
-        assert graph.is_directed is False
+        assert not graph.directed.any()
 
 
 class TestKnownNetworks:
@@ -326,31 +326,31 @@ class TestKnownNetworks:
         assert graph.edges() == (("v0", "v1", "undirected"), ("v1", "v2", "undirected"))
 
     def test_random_networks(self) -> None:
-        """For 20 networks of 8 binary variables with effects of +-1.5 logits, 400,000 rows give the CPDAG.
+        """For these 30 networks of 6 binary variables, 100,000 rows give back the CPDAG.
 
-        Level 1e-6, so that some 100 tests of a true independence each hardly ever reject.
+        Level 1e-5, so that the few dozen tests of a true independence in each hardly ever reject.
         """
-        for seed in range(20):
+        for seed in range(30):
             rng = np.random.default_rng(seed)
-            network = logit_network(8, rng)
-            data = network.sample(400_000, rng=rng)
+            network = logit_network(6, rng)
+            data = network.sample(100_000, rng=rng)
 
-            graph = pc(data, alpha=1e-6)
+            graph = pc(data, alpha=1e-5)
 
             assert cpdag(network.graph) == graph
 
 
 def logit_network(p: int, rng: np.random.Generator) -> Network:
-    """Draw a DAG in which each parent shifts the log odds of its child by 1.5 up or down."""
+    """Draw a DAG in which each parent shifts the log odds of its child by 1.2 to 2.4, up or down."""
     names = tuple(f"v{j}" for j in range(p))
     order = rng.permutation(p)
     arcs, cpts = [], {}
     for place, v in enumerate(order):
         parents = rng.choice(order[:place], min(place, int(rng.integers(0, 3))), replace=False)
         arcs += [(names[u], names[v]) for u in parents]
-        log_odds = np.zeros((2,) * len(parents))
+        log_odds = np.full((2,) * len(parents), rng.uniform(-1, 1))
         for axis in range(len(parents)):
-            shift = rng.choice([-1.5, 1.5]) * np.array([-1.0, 1.0])
+            shift = rng.choice([-1, 1]) * rng.uniform(0.6, 1.2) * np.array([-1.0, 1.0])
             log_odds = log_odds + shift.reshape([2 if i == axis else 1 for i in range(len(parents))])
         one = 1 / (1 + np.exp(-log_odds))
         cpts[names[v]] = Cpt(names[v], tuple(names[u] for u in parents), np.stack([1 - one, one], axis=-1))

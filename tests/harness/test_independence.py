@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from itertools import permutations
 
 import numpy as np
@@ -15,12 +16,12 @@ from generators.errors import InputError
 from harness.counts import count_plain, prepare
 from harness.independence import (
     attainable_critical_values,
+    conditional_statistics,
     critical_values,
     dependent_pairs,
     independence_test,
     pair_statistics,
     statistic_ceilings,
-    statistic_given,
 )
 
 # Berkeley admissions 1973 (Bickel, Hammel and O'Connell, Science 187, 1975, 398-404; counts by department
@@ -274,9 +275,21 @@ class TestCompiled:
         columns = prepare(data)
         others = list(range(2, data.n_variables))
 
-        found = statistic_given(columns, 0, 1, others, test)
+        [found], [df] = conditional_statistics(columns, [(0, 1)], [others], test)
 
+        sizes = data.cardinalities.tolist()
         assert found == pytest.approx(plain_statistic(data, 0, 1, others, test), abs=1e-8)
+        assert math.prod([sizes[0] - 1, sizes[1] - 1, *sizes[2:]]) == df
+
+    def test_several_at_once(self, rng: np.random.Generator) -> None:
+        """Each pair is answered given its own variables, none included."""
+        data = dataset_of(rng.integers(0, 3, (100, 5)), [3, 4, 3, 5, 3])
+        questions = [((0, 1), [2, 3]), ((4, 2), []), ((3, 1), [4])]
+
+        statistics, _ = conditional_statistics(prepare(data), *zip(*questions))
+
+        expected = [plain_statistic(data, x, y, given, "g2") for (x, y), given in questions]
+        assert statistics.tolist() == pytest.approx(expected)
 
     @pytest.mark.parametrize("test", ["g2", "pearson"])
     @given(data=datasets())
@@ -323,7 +336,7 @@ class TestCompiled:
         codes[:, [0, 1, 3]] = spread[few[:, [0, 1, 3]]]
         wide = dataset_of(codes, [r, r, 3, r])
 
-        found = statistic_given(prepare(wide), 0, 1, [2, 3], test)
+        [found], _ = conditional_statistics(prepare(wide), [(0, 1)], [[2, 3]], test)
         pair = pair_statistics(prepare(wide), test)[0, 1]
 
         narrow = dataset_of(few, [3, 3, 3, 3])
@@ -336,7 +349,7 @@ class TestCompiled:
         columns = prepare(dataset_from_table(BERKELEY))
 
         marginal = pair_statistics(columns, test)[1, 2]
-        conditional = statistic_given(columns, 1, 2, [0], test)
+        [conditional], _ = conditional_statistics(columns, [(1, 2)], [[0]], test)
 
         expected = (93.4494, 21.7355) if test == "g2" else (92.2053, 19.9384)
         assert expected == (round(marginal, 4), round(conditional, 4))
