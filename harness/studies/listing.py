@@ -54,7 +54,7 @@ def _learners() -> list[Record]:
                 "baseline": specification.baseline,
                 "revision": specification.revision,
                 "settings": _settings(specification.settings),
-                "text": inspect.getdoc(specification.function) or "",
+                "text": _text(specification.function),
             }
         )
     return records
@@ -68,7 +68,7 @@ def _registered(registry: Registry) -> list[Record]:
             "reference": entry.reference,
             "revision": entry.revision,
             "settings": _settings(entry.settings),
-            "text": inspect.getdoc(entry.function) or "",
+            "text": _text(entry.function),
         }
         for entry in registry.values()
     ]
@@ -93,6 +93,11 @@ def _networks() -> list[Record]:
             }
         )
     return records
+
+
+def _text(function: Callable[..., Any]) -> str:
+    """Return a function's docstring without its examples, which are for readers of the code."""
+    return (inspect.getdoc(function) or "").partition("\nExamples\n")[0].rstrip()
 
 
 def _settings(settings: Mapping[str, Setting]) -> list[Record]:

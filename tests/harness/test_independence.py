@@ -240,7 +240,7 @@ class TestCriticalValues:
 
     def test_many_states_stay_small(self) -> None:
         """The list is bounded by the ceiling, however many states and variables there are."""
-        found = attainable_critical_values(0.01, np.arange(1, 256), 12, 20_000.0)
+        found = attainable_critical_values(0.01, np.arange(1, 256), 5, 20_000.0)
 
         assert found.df[-1] < 33_000
 

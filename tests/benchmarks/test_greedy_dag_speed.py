@@ -1,0 +1,97 @@
+"""How long hill climbing takes: beside numpy's bincount for as many tables, and as p and n grow."""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+import pytest
+
+from generators.cpts import generate_network
+from generators.dataset import Dataset
+from generators.sampling import sample
+from generators.topologies import generate_graph
+from harness.learners.greedy_dag import hill_climbing
+
+pytestmark = pytest.mark.benchmark
+
+# Seconds owed on the machine this was planned on.
+OWED = {(100, 1_000): 0.006, (500, 10_000): 0.6, (1000, 1_000): 1.3, (1000, 100_000): 15.0}
+
+
+def seconds(function: Callable[[], Any], rounds: int) -> float:
+    """Return the shortest time of some calls: the one that was disturbed least."""
+    times = []
+    for _ in range(rounds):
+        start = time.perf_counter()
+        function()
+        times.append(time.perf_counter() - start)
+    return min(times)
+
+
+def draw_data(p: int, n: int) -> Dataset:
+    """Draw rows of a sparse random network with 2 to 4 states."""
+    rng = np.random.default_rng(p)
+    graph = generate_graph("random-order", variables=p, mean_parents=1.25, max_parents=3, rng=rng)
+    network = generate_network(graph, states="2-4", concentration=0.5, rng=rng)
+    return sample(network, n, bytes(16))
+
+
+def learn(data: Dataset, score: str, restarts: int = 0) -> int:
+    """Learn, and return the number of arcs."""
+    rng = np.random.default_rng(1)
+    return hill_climbing(data, score=score, restarts=restarts, rng=rng).n_edges  # type: ignore[arg-type]
+
+
+@pytest.mark.parametrize("score", ["bic", "bdeu", "k2"])
+@pytest.mark.parametrize(
+    ("p", "n"),
+    [(20, 1_000), (20, 100_000), (100, 1_000), (100, 10_000), (200, 1_000), (500, 10_000), (1000, 1_000)],
+)
+def test_a_search(score: str, p: int, n: int, benchmark: Any) -> None:
+    """One search from no arcs, beside a bincount of one column for each family that it must score at least."""
+    data = draw_data(p, n)
+    column = np.ascontiguousarray(data.codes[:, 0])
+    rounds = max(2, min(30, int(4e7 / (p * p * math.sqrt(n) * 30))))
+
+    n_edges = benchmark.pedantic(learn, (data, score), rounds=rounds, warmup_rounds=1)
+
+    fastest = benchmark.stats.stats.min
+    n_families = p * (p - 1) / 2 + n_edges * p  # the first pass, and a column for each arc added
+    per_family = seconds(lambda: np.bincount(column), 30)
+    benchmark.extra_info["ratio_to_bincounts"] = fastest / (n_families * per_family)
+    benchmark.extra_info["share_of_owed"] = fastest / OWED[p, n] if (p, n) in OWED else None
+
+
+def test_ten_restarts(benchmark: Any) -> None:
+    """Ten random starts on 100 variables, beside the search from no arcs."""
+    data = draw_data(100, 1_000)
+
+    benchmark.pedantic(learn, (data, "bic", 10), rounds=5, warmup_rounds=1)
+
+    alone = seconds(lambda: learn(data, "bic"), 10)
+    benchmark.extra_info["ratio_to_one_search"] = benchmark.stats.stats.min / alone
+
+
+@pytest.mark.parametrize(
+    ("small", "large"),
+    [
+        ((50, 1_000), (200, 1_000)),
+        ((200, 1_000), (800, 1_000)),
+        ((100, 1_000), (100, 10_000)),
+        ((50, 10_000), (50, 100_000)),
+    ],
+    ids=lambda size: f"{size[0]}x{size[1]}",
+)
+def test_growth(small: tuple[int, int], large: tuple[int, int], benchmark: Any) -> None:
+    """The exponent of the time in variables or rows, whichever differs."""
+    few, many = draw_data(*small), draw_data(*large)
+
+    benchmark.pedantic(learn, (many, "bic"), rounds=3, warmup_rounds=1)
+
+    ratio = benchmark.stats.stats.min / seconds(lambda: learn(few, "bic"), 10)
+    growth = large[0] / small[0] * large[1] / small[1]
+    benchmark.extra_info["exponent"] = math.log(ratio) / math.log(growth)
