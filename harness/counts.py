@@ -143,7 +143,7 @@ def count(columns: Columns, variables: Sequence[int]) -> NDArray[np.int64]:
     chosen = np.array(variables, dtype=np.int64)
     shape, cells = _shape(columns, chosen)
     table = np.zeros(cells, dtype=np.int64)
-    _count(columns, chosen, table)
+    _count(*columns, chosen, table)
     return table.reshape(shape)
 
 
@@ -693,18 +693,30 @@ def _fill_planes(
 
 
 @kernel
-def _count(columns: Columns, variables: NDArray[np.int64], table: NDArray[np.int64]) -> None:
-    # The table comes zeroed.
+def _count(
+    codes: Codes,
+    cardinalities: NDArray[np.int64],
+    planes: NDArray[np.uint64],
+    offsets: NDArray[np.int64],
+    plane_sizes: NDArray[np.uint32],
+    variables: NDArray[np.int64],
+    table: NDArray[np.int64],
+) -> None:
+    # The table comes zeroed. (Arrays one by one: numba takes longer to unpack a named tuple than all else
+    # here takes for a few thousand rows.)
+    columns = Columns(codes, cardinalities, planes, offsets, plane_sizes)
     k = variables.shape[0]
-    has_planes = k > 0
+    if k == 0:
+        table[0] = codes.shape[1]
+        return
+    has_planes = True
     for j in range(k):
-        has_planes &= columns.offsets[variables[j] + 1] > columns.offsets[variables[j]]
+        has_planes &= offsets[variables[j] + 1] > offsets[variables[j]]
     if not has_planes or table.shape[0] > MAX_PLANE_CELLS:
         _count_blocks(columns, variables, table)
     elif k == 1:
-        first = columns.offsets[variables[0]]
         for s in range(table.shape[0]):
-            table[s] = columns.plane_sizes[first + s]
+            table[s] = plane_sizes[offsets[variables[0]] + s]
     elif k == 2:
         tabulate_pair(columns, variables[0], variables[1], table)
     else:
@@ -713,28 +725,43 @@ def _count(columns: Columns, variables: NDArray[np.int64], table: NDArray[np.int
 
 @inlined
 def _count_planes(columns: Columns, variables: NDArray[np.int64], table: NDArray[np.int64]) -> None:
-    # As `split_planes` and `tabulate_planes`, but block by block and with all joint states.
-    last = variables.shape[0] - 1
-    n_words = columns.planes.shape[1]
-    r_last = columns.cardinalities[variables[last]]
-    base = np.empty((table.shape[0] // r_last, min(n_words, BLOCK_WORDS)), dtype=np.uint64)
-    sizes = np.empty(base.shape[0], dtype=np.uint32)
+    # As `split_planes` and `tabulate_planes`, but block by block and with all joint states. The base is
+    # made of all variables but the one with most states, which is cheapest to count within it.
+    k, n_words = variables.shape[0], columns.planes.shape[1]
+    most = 0
+    for j in range(k):
+        if columns.cardinalities[variables[j]] > columns.cardinalities[variables[most]]:
+            most = j
+    r_most = columns.cardinalities[variables[most]]
+    first_most = columns.offsets[variables[most]]
+    n_base = table.shape[0] // r_most
+    base = np.empty((n_base, min(n_words, BLOCK_WORDS)), dtype=np.uint64)
+    sizes = np.empty(n_base, dtype=np.uint32)
+    found = np.zeros(table.shape[0], dtype=np.int64)
     for start in range(0, n_words, BLOCK_WORDS):
         end = min(n_words, start + BLOCK_WORDS)
         n_parts = 1
-        for j in range(last + 1):
-            first = columns.offsets[variables[j]]
-            r = columns.cardinalities[variables[j]]
-            if j == 0:
-                for s in range(r):
-                    _copy(columns.planes[first + s, start:end], base[s])
-            elif j < last:
-                _split_parts(base, n_parts, columns.planes, first, r, start, end)
-            else:
-                for c in range(n_parts):
-                    sizes[c] = plane_size(base[c, : end - start])
-                count_within(columns.planes, first, r, start, end, base, sizes, n_parts, table)
-            n_parts *= r
+        for j in range(k):
+            if j != most:
+                first = columns.offsets[variables[j]]
+                r = columns.cardinalities[variables[j]]
+                if n_parts == 1:
+                    for s in range(r):
+                        _copy(columns.planes[first + s, start:end], base[s])
+                else:
+                    _split_parts(base, n_parts, columns.planes, first, r, start, end)
+                n_parts *= r
+        for c in range(n_parts):
+            sizes[c] = plane_size(base[c, : end - start])
+        count_within(columns.planes, first_most, r_most, start, end, base, sizes, n_parts, found)
+    # Back to the order of the axes: the base runs over those before and those after the one with most.
+    n_after = 1
+    for j in range(most + 1, k):
+        n_after *= columns.cardinalities[variables[j]]
+    for c in range(n_base):
+        before, after = c // n_after, c % n_after
+        for s in range(r_most):
+            table[(before * r_most + s) * n_after + after] = found[c * r_most + s]
 
 
 @inlined
@@ -765,13 +792,15 @@ def _index_block(
 ) -> None:
     m = cells.shape[0]
     number = cells.dtype.type
-    for i in range(m):
-        cells[i] = number(0)
     for j in range(variables.shape[0]):
         states = columns.codes[variables[j], start : start + m]
         r = number(columns.cardinalities[variables[j]])
-        for i in range(m):
-            cells[i] = number(cells[i] * r + number(states[i]))
+        if j == 0:
+            for i in range(m):
+                cells[i] = number(states[i])
+        else:
+            for i in range(m):
+                cells[i] = number(number(cells[i] * r) + number(states[i]))
 
 
 @warm_up

@@ -18,7 +18,8 @@ The lower half of this file is for learners to compile into their loops. A loop 
 with a critical value and never computes a p-value. It need not count at all where the critical value is
 above the *ceiling* of the statistic, the greatest value that it can take given the two margins: G2 is at
 most 2 n times the smaller entropy, X2 at most n (r - 1) for the smaller number of seen states r. The
-critical value grows with the degrees of freedom, so few questions have a table much larger than n.
+critical value grows with the degrees of freedom, so that tables with far more cells than rows are rarely
+asked for; where they are, the rows are gone through instead, and nothing of the table's size is allocated.
 """
 
 from __future__ import annotations
@@ -114,21 +115,26 @@ def independence_test(table: NDArray[np.integer[Any]], *, test: Test = "g2") -> 
             f"a table must hold counts on three axes (strata, x, y), none empty, got {counts.dtype} of "
             f"shape {counts.shape}"
         )
-    if test not in ("g2", "pearson"):
-        raise InputError(f"test must be one of g2, pearson, got {test!r}")
+    is_pearson = _is_pearson(test)
     seen = counts.astype(np.float64)
     strata = seen.sum(axis=(1, 2), keepdims=True)
     expected = seen.sum(axis=2, keepdims=True) * seen.sum(axis=1, keepdims=True) / np.maximum(strata, 1)
     possible = expected > 0
     seen, expected = seen[possible], expected[possible]
-    if test == "g2":
-        statistic = 2 * float((seen * np.log(np.where(seen > 0, seen / expected, 1))).sum())
-    else:
+    if is_pearson:
         statistic = float(((seen - expected) ** 2 / expected).sum())
+    else:
+        statistic = 2 * float((seen * np.log(np.where(seen > 0, seen / expected, 1))).sum())
     q, r_x, r_y = counts.shape
     df = q * (r_x - 1) * (r_y - 1)
     statistic = max(statistic, 0.0) if df else 0.0
     return TestResult(statistic, df, float(chdtrc(df, statistic)) if df else 1.0)
+
+
+def _is_pearson(test: str) -> bool:
+    if test not in ("g2", "pearson"):
+        raise InputError(f"test must be one of g2, pearson, got {test!r}")
+    return test == "pearson"
 
 
 class CriticalValues(NamedTuple):
@@ -211,7 +217,10 @@ def _attainable(alpha: float, sizes: tuple[int, ...], n_given: int, ceiling: flo
     else:
         df = np.unique(np.multiply.outer(_attainable(alpha, sizes, n_given - 1, ceiling).df, states))
     value = critical_values(alpha, df)
-    return CriticalValues(df[value < ceiling], value[value < ceiling])
+    attainable = CriticalValues(df[value < ceiling], value[value < ceiling])
+    for array in attainable:
+        array.flags.writeable = False
+    return attainable
 
 
 def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:
@@ -235,7 +244,7 @@ def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:
     >>> statistic_ceilings(prepare(data), "pearson").tolist()
     [2.0, 0.0]
     """
-    return _ceilings(columns, test == "pearson")
+    return _ceilings(columns, _is_pearson(test))
 
 
 def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
@@ -258,7 +267,7 @@ def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
     >>> pair_statistics(prepare(data), "pearson").tolist()
     [[0.0, 10.0], [10.0, 0.0]]
     """
-    upper = _pair_statistics(columns, statistic_workspace(columns), test == "pearson")
+    upper = _pair_statistics(columns, statistic_workspace(columns), _is_pearson(test))
     return upper + upper.T
 
 
@@ -327,7 +336,7 @@ def conditional_statistics(
     variables = np.array([v for own in given for v in own], dtype=np.int64)
     questions = np.array(pairs, dtype=np.int64).reshape(-1, 2)
     return _conditional_statistics(
-        columns, questions, ends, variables, statistic_workspace(columns), test == "pearson"
+        columns, questions, ends, variables, statistic_workspace(columns), _is_pearson(test)
     )
 
 

@@ -1,7 +1,8 @@
 """What the ledger lacks of a plan, in the order in which it is done.
 
-Replicate by replicate through all conditions, so that a run that is stopped leaves a balanced ledger;
-within a dataset from few rows to many, and there in the plan's order of learners.
+Replicate by replicate through all conditions (of a given network: dataset by dataset), so that work
+that is stopped leaves a balanced ledger; within a dataset from few rows to many, and there in the plan's
+order of learners.
 """
 
 from __future__ import annotations
@@ -16,7 +17,7 @@ from harness.ledger.store import KnownRun, RunKey
 from harness.plan.expansion import settings_for
 from harness.plan.recipes import dataset_key
 from harness.plan.schema import Plan
-from harness.records import Learner, Status
+from harness.records import Condition, Learner, Status
 
 # Of one piece of work: what is handed out must fit into a socket's buffer, or the main process could wait
 # for a supervisor that waits for the main process.
@@ -35,7 +36,9 @@ class DatasetSlot:
 
 
 def slots(plan: Plan, network_keys: Mapping[int, list[bytes]]) -> Iterator[DatasetSlot]:
-    """Go through all datasets of a plan, replicate by replicate.
+    """Go through all datasets of a plan, unit by unit.
+
+    The unit is the network with all its datasets, or of a given network, where there is one, the dataset.
 
     Parameters
     ----------
@@ -43,12 +46,22 @@ def slots(plan: Plan, network_keys: Mapping[int, list[bytes]]) -> Iterator[Datas
     network_keys : mapping of int to list of bytes
         For each condition, the keys of its replicates.
     """
-    for replicate in range(max((c.replicates for c in plan.conditions), default=0)):
-        for position, condition in enumerate(plan.conditions):
-            if replicate < condition.replicates:
+    units = [_units(condition) for condition in plan.conditions]
+    for number in range(max(map(len, units), default=0)):
+        for position, own in enumerate(units):
+            for replicate, index in own[number] if number < len(own) else ():
                 key = network_keys[position][replicate]
-                for index in range(condition.datasets):
-                    yield DatasetSlot(position, replicate, index, key, dataset_key(key, index))
+                yield DatasetSlot(position, replicate, index, key, dataset_key(key, index))
+
+
+def _units(condition: Condition) -> list[list[tuple[int, int]]]:
+    """Return the datasets of each unit of a condition, as (replicate, index)."""
+    if condition.is_given:
+        return [[(0, index)] for index in range(condition.datasets)]
+    return [
+        [(replicate, index) for index in range(condition.datasets)]
+        for replicate in range(condition.replicates)
+    ]
 
 
 def missing_work(

@@ -182,17 +182,18 @@ def find_skeleton(
     max_cells = n / min_per_cell if min_per_cell > 0 else np.inf
     statistics = pair_statistics(columns, test)
     adjacent = dependent_pairs(statistics, columns.cardinalities, alpha)
-    adjacent |= _untestable_pairs(columns.cardinalities, max_cells)
+    if min_per_cell > 0:
+        adjacent |= _untestable_pairs(columns.cardinalities, max_cells)
     order = np.argsort(np.round(statistics.sum(axis=1), DECIMALS), kind="stable")
     ceilings = statistic_ceilings(columns, test)
     work = statistic_workspace(columns)
+    is_pearson = test == "pearson"
     levels: list[tuple[NDArray[np.int64], NDArray[np.int64]]] = []
     while max_conditioning is None or len(levels) < max_conditioning:
         n_given = len(levels) + 1
         critical = attainable_critical_values(
             alpha, columns.cardinalities, n_given, ceilings.max(initial=0.0)
         )
-        is_pearson = test == "pearson"
         pairs, given, is_any_made = _separate(
             columns, statistics, order, n_given, adjacent, critical, ceilings, max_cells, work, is_pearson
         )

@@ -184,6 +184,8 @@ class Search(NamedTuple):
     gains : float64 array, shape (p, p)
         ``[y, x]``: the change of y's score if x were taken out of its parents or, where it is none, put
         in, legal or not; minus infinity where y has no room.
+    alone : float64 array, shape (p, p)
+        The gains while no variable has parents; on the diagonal the scores.
     best_gain : float64 array, shape (p,)
         The gain of the best addition to y's parents that was legal when it was found; minus infinity if
         none was.
@@ -198,6 +200,7 @@ class Search(NamedTuple):
     n_parents: NDArray[np.int64]
     scores: NDArray[np.float64]
     gains: NDArray[np.float64]
+    alone: NDArray[np.float64]
     best_gain: NDArray[np.float64]
     best_source: NDArray[np.int64]
     reaches: NDArray[np.uint64]
@@ -225,21 +228,19 @@ def _climb(
         np.empty((p, max_parents), dtype=np.int64),
         np.zeros(p, dtype=np.int64),
         np.empty(p),
-        alone.copy(),
+        np.empty((p, p)),
+        alone,
         np.empty(p),
         np.zeros(p, dtype=np.int64),
         np.zeros((p, (p + WORD_ROWS - 1) // WORD_ROWS), dtype=np.uint64),
     )
     for y in range(p):
-        state.scores[y] = alone[y, y]
-        state.gains[y, y] = -np.inf
         for x in range(p):
             if start[x, y]:
                 _insert_parent(state, x, y)
     _trace_paths(state)
     for y in range(p):
-        if state.n_parents[y] > 0:
-            _score_changes(columns, rule, y, state, space)
+        _score_changes(columns, rule, y, state, space)
         _find_best_addition(state, y)
     while True:
         move, x, y = _choose_move(width, max_parents, state)
@@ -418,7 +419,11 @@ def _score_changes(columns: Columns, rule: Scoring, y: int, state: Search, space
     # Scores y's family and the gain of every change to it.
     k = state.n_parents[y]
     parents, gains = state.parents[y, :k], state.gains[y]
-    if k < state.parents.shape[1]:
+    if k == 0:
+        state.scores[y] = state.alone[y, y]
+        for x in range(gains.shape[0]):
+            gains[x] = state.alone[y, x]
+    elif k < state.parents.shape[1]:
         state.scores[y] = _score_additions(
             columns, rule, parents, y, state.is_parent[y], np.int64(0), gains, space
         )

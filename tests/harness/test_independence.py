@@ -194,6 +194,8 @@ class TestPlain:
         """An unknown test is refused with the accepted ones."""
         with pytest.raises(InputError, match="test must be one of g2, pearson, got 'g'"):
             independence_test(np.ones((1, 2, 2), dtype=int), test="g")  # type: ignore[arg-type]
+        with pytest.raises(InputError, match="test must be one of g2, pearson, got 'g'"):
+            pair_statistics(prepare(dataset_of(np.zeros((2, 2)), [2, 2])), "g")  # type: ignore[arg-type]
 
 
 class TestCriticalValues:

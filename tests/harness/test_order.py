@@ -87,6 +87,32 @@ def test_work_goes_replicate_by_replicate_through_all_conditions(make_plan: Call
         assert max(per_condition) - min(per_condition) <= 1
 
 
+def test_given_networks_take_turns_dataset_by_dataset(tmp_path: Path) -> None:
+    """Where every condition has one network, the dataset is the unit, and conditions stay balanced too."""
+    (tmp_path / "learners.py").write_text(LEARNERS)
+    text = """
+[networks]
+published = ["sprinkler", "burglary"]
+[data]
+rows = 100
+datasets = 3
+[[learner]]
+source = "learners.py:one"
+"""
+    plan = parse_plan(text, tmp_path / "plan.toml")
+
+    works = all_work(plan)
+
+    assert [(work.index, work.condition) for work in works] == [
+        (0, 0),
+        (0, 1),
+        (1, 0),
+        (1, 1),
+        (2, 0),
+        (2, 1),
+    ]
+
+
 def test_within_a_dataset_few_rows_come_first_and_learners_in_the_plans_order(
     make_plan: Callable[..., Plan],
 ) -> None:
