@@ -46,7 +46,7 @@ Score = Literal["bic", "aic", "bdeu", "k2"]
 SCORE_EQUIVALENT = frozenset({"bic", "aic", "bdeu"})
 
 MAX_JOINT_STATES = 1e300  # q is kept below this, so that ess / q stays above 0
-MEMO_ROWS = 64
+MEMO_ROWS = 64  # 2^6
 MEMO_COUNTS = 2048
 HASH_FACTOR = 0x9E3779B97F4A7C15  # 2^64 over the golden ratio: multiplicative hashing (Knuth 1973)
 
@@ -414,7 +414,7 @@ def remembered(
     A row that held the terms of another divisor is cleared.
     """
     hashed = np.uint64(min(divisor, 1e18)) * np.uint64(HASH_FACTOR)
-    slot = hashed >> np.uint64(58)
+    slot = hashed >> np.uint64(58)  # the upper 6 of 64 bits: one of MEMO_ROWS
     row: NDArray[np.float64] = memo[slot]
     if divisors[slot] != divisor:
         divisors[slot] = divisor

@@ -46,6 +46,7 @@ MAX_BATCH = 500  # events handed back at once: what one commit of the ledger hol
 GATHER_SECONDS = 0.1  # from the first of them: what kill -9 may cost, to be done again
 LOOK_SECONDS = 0.2  # how soon a wish to stop is noticed
 END_SECONDS = 5.0  # for a supervisor to end its runners
+BUFFER_BYTES = 1 << 18  # holds all work that is handed out ahead, so that no sending has to wait
 MAX_DEATHS = 5
 MARK = "ARCASSAY_WORKER"  # in the environment of all that a worker starts
 
@@ -252,6 +253,7 @@ class LocalEngine:
     def _start(self, place: int = 0) -> _Worker:
         """Start the worker that begins at this place of what there may be to compile."""
         ours, theirs = socket.socketpair()
+        ours.setsockopt(socket.SOL_SOCKET, socket.SO_SNDBUF, BUFFER_BYTES)
         arguments = [str(_ROOT), str(theirs.fileno()), str(os.getpid())]
         try:
             errors = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the worker lives

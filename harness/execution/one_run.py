@@ -104,6 +104,18 @@ class MaterialSource:
         return Material(work, self._network, self._truth, view, view.mask(data))
 
 
+def compile_for_wide_codes(specification: Specification, material: Material, request: Request) -> None:
+    """Call a built-in learner on two rows, untimed, where codes take two bytes.
+
+    Its kernels for one byte were compiled at the start; those for two are when they are first met, which
+    must not count as the learner's time.
+    """
+    if material.masked.codes.dtype != np.uint8:
+        rng = learner_rng(material.work.dataset_key, request.rows)
+        with contextlib.suppress(Exception):  # what is wrong shows in the run itself
+            call(specification, material.masked.first(min(2, request.rows)), request.settings, rng)
+
+
 def timed_call(specification: Specification, material: Material, request: Request) -> Timed:
     """Call the learner on its view, and time nothing but that call.
 

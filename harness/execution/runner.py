@@ -21,7 +21,15 @@ from generators.errors import InputError
 from generators.streams import canonical_json
 from harness.execution.memory import MEBIBYTE
 from harness.execution.messages import Request, Work, outcome_fields
-from harness.execution.one_run import Material, MaterialSource, failed, scored, timed_call, timed_fields
+from harness.execution.one_run import (
+    Material,
+    MaterialSource,
+    compile_for_wide_codes,
+    failed,
+    scored,
+    timed_call,
+    timed_fields,
+)
 from harness.execution.processes import die_with_parent
 from harness.learners.sources import folder_of, load, own_folder
 from harness.learners.specification import Specification
@@ -87,7 +95,7 @@ def serve_many(
         while True:
             command, *arguments = connection.recv()
             if command == "draw":
-                material = _draw(connection, source, arguments[0])
+                material = _draw(connection, source, arguments[0], specifications)
                 continue
             assert material is not None
             for request in material.work.requests[slice(*arguments)]:
@@ -128,12 +136,17 @@ def _outcome_of(
     return scored(material, learner, timed)
 
 
-def _draw(connection: Connection, source: MaterialSource, work: Work) -> Material | None:
+def _draw(
+    connection: Connection, source: MaterialSource, work: Work, specifications: Mapping[int, Specification]
+) -> Material | None:
     try:
         material = source.draw(work)
     except InputError as error:
         _send(connection, event="cannot-draw", message=str(error))
         return None
+    for request in {request.learner: request for request in work.requests}.values():
+        if request.learner in specifications:
+            compile_for_wide_codes(specifications[request.learner], material, request)
     network, dataset = material.drawn_network, material.drawn_dataset
     _send(
         connection,

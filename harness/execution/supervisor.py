@@ -228,6 +228,8 @@ class Supervisor:
                 self._material = self._source.draw(work)
             except InputError as error:
                 raise _CannotDraw(str(error)) from None
+            except MemoryError:
+                raise _CannotDraw("there is not memory enough for a network and its dataset") from None
             self._main.send(
                 ("drawn", work.number, self._material.drawn_network, self._material.drawn_dataset)
             )

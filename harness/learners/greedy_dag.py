@@ -80,9 +80,9 @@ def hill_climbing(
     """Add, delete or reverse the arc that improves a score most, until none does.
 
     The first search starts from no arcs. Each restart is one more search, from a random sparse DAG: along
-    a uniformly random order of the variables each pair is an arc with probability 2 / (p - 1), which
-    makes one parent per variable on average, and a variable that got more than `max_parents` keeps that
-    many of them, chosen at random. The graph with the greatest score of all searches is returned, the
+    a uniformly random order of the variables each pair is an arc with probability 2 / (p - 1), at most 1,
+    which makes one parent per variable on average, and a variable that got more than `max_parents` keeps
+    that many of them, chosen at random. The graph with the greatest score of all searches is returned, the
     earliest among equals.
 
     Parameters
