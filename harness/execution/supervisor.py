@@ -15,19 +15,17 @@ from __future__ import annotations
 import contextlib
 import gc
 import importlib
-import json
 import os
-import select
 import shutil
 import signal
 import sys
 import tempfile
 import time
 from collections import deque
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable
+from dataclasses import replace
 from math import ceil, inf
-from multiprocessing.connection import Connection, Pipe
-from pathlib import Path
+from multiprocessing.connection import Connection
 from types import FrameType
 from typing import Any
 
@@ -36,18 +34,16 @@ from generators.errors import InputError
 from harness.execution import memory, processes
 from harness.execution.messages import Work, drawn_from, outcome_fields, outcome_from
 from harness.execution.one_run import Material, MaterialSource, scored, timed_from
-from harness.execution.runner import fork_runner, serve_many, serve_one
+from harness.execution.runner import serve_many, serve_one
+from harness.execution.watched import GRACE_SECONDS, Watched
 from harness.learners.builtin import built_in
 from harness.learners.sources import needs_isolation
 from harness.ledger.store import now
 from harness.records import Learner, Outcome, Status
 
+SLACK_SECONDS = 0.01  # the learner's own clock starts a little after ours; it judges, ours only ends
 POLL_SECONDS = 0.03  # how often a running learner's memory is looked at
-GRACE_SECONDS = 0.2  # between the request to end and the end
 LOADING_SECONDS = 120.0  # for importing somebody's learner, which its own limit does not cover
-MAX_OUTPUT_BYTES = 16 << 20
-MAX_ANSWER_BYTES = 1 << 30
-TAIL_BYTES = 2000
 # What reads a learner's answer: imported before the fork, not within the time of the first call.
 _PRELOADED = ("networkx", "pandas")
 
@@ -58,32 +54,6 @@ class _MainIsGone(Exception):
 
 class _CannotDraw(Exception):
     """A network or dataset could not be drawn: an error of the input, not of a learner."""
-
-
-@dataclass(slots=True)
-class _Runner:
-    """A forked runner, seen from outside."""
-
-    pid: int
-    connection: Connection
-    poll: select.poll  # on the main process and the runner
-    output: int
-    folder: Path
-    drawn: int | None = None  # the number of the work whose material it holds
-    ended: bool = field(default=False)
-
-    def ask(self, *command: Any) -> None:
-        """Send a command; that it is gone is noticed where its answer is awaited."""
-        with contextlib.suppress(BrokenPipeError, ConnectionResetError):
-            self.connection.send(command)
-
-    def answer(self) -> dict[str, Any] | None:
-        """Return what it says, or None if that is nothing of ours, or the end."""
-        try:
-            answer = json.loads(self.connection.recv_bytes(MAX_ANSWER_BYTES))
-        except (EOFError, OSError, ValueError):
-            return None
-        return answer if isinstance(answer, dict) and "event" in answer else None
 
 
 class Supervisor:
@@ -104,7 +74,7 @@ class Supervisor:
         self._learners = learners
         self._queue: deque[Work] = deque()
         self._stopping = False
-        self._steady: _Runner | None = None
+        self._steady: Watched | None = None
         self._source = MaterialSource()
         self._material: Material | None = None
         self._last_event = time.monotonic()
@@ -179,7 +149,7 @@ class Supervisor:
         while at < end:
             runner = self._runner_with(work)
             runner.ask("learn", at, end)
-            while at < end and not runner.ended:
+            while at < end and not runner.has_ended:
                 if self._stopping:
                     return end
                 started = now()
@@ -212,7 +182,6 @@ class Supervisor:
     def _report(self, work: Work, position: int, fields: dict[str, Any], started: str) -> None:
         learner = self._learner_at(work, position)
         if fields["status"] == Status.DONE and fields["wall_seconds"] > learner.limits.seconds:
-            # The learner's own clock judges, which starts and stops a little before ours.
             fields = outcome_fields(replace(_over_time(learner), load=fields["load"]))
         overhead = time.monotonic() - self._last_event - (fields["wall_seconds"] or 0.0)
         self._main.send(("ended", work.number, position, fields, started, overhead))
@@ -235,10 +204,10 @@ class Supervisor:
             )
         return self._material
 
-    def _runner_with(self, work: Work) -> _Runner:
+    def _runner_with(self, work: Work) -> Watched:
         """Return the steady runner, holding the network and dataset of some work."""
         for _ in range(2):
-            if self._steady is None or self._steady.ended:
+            if self._steady is None or self._steady.has_ended:
                 self._steady = self._fork(serve_many(self._learners, self._specifications))
             runner = self._steady
             if runner.drawn == work.number:
@@ -257,7 +226,7 @@ class Supervisor:
     # Watching ---------------------------------------------------------------------------------------
 
     def _watch(
-        self, runner: _Runner, learner: Learner | None
+        self, runner: Watched, learner: Learner | None
     ) -> tuple[dict[str, Any] | None, Outcome | None]:
         """Wait for a runner's answer, holding it to a learner's limits.
 
@@ -287,27 +256,26 @@ class Supervisor:
                     return reply, None
                 is_called, began = True, time.monotonic()
             elif not ready:
-                # A child of the learner's may hold the connection open when the runner itself is gone.
-                if processes.has_exited(runner.pid) and not runner.connection.poll():
+                if runner.is_silent_for_good():
                     return None, self._obituary(runner, load)
-                self._trim_output(runner)
+                runner.trim_output()
                 if learner is not None and self._holds(runner) > learner.limits.memory_mb:
                     cause = f"over the limit of {learner.limits.memory_mb} MB of memory"
                     return None, self._stop(runner, Outcome(Status.OUT_OF_MEMORY, cause), load)
 
-    def _holds(self, runner: _Runner) -> float:
+    def _holds(self, runner: Watched) -> float:
         """Return the memory of a runner and all that was started in it, adopted processes too."""
         if runner is self._steady:
             return memory.resident_mb(processes.with_descendants([runner.pid]))
         return memory.resident_mb(processes.with_descendants(processes.children(os.getpid()) - self._kept()))
 
-    def _stop(self, runner: _Runner, outcome: Outcome, load: float) -> Outcome:
-        tail = self._tail(runner)
+    def _stop(self, runner: Watched, outcome: Outcome, load: float) -> Outcome:
+        tail = runner.tail()
         self._end(runner)
         return replace(outcome, cause=outcome.cause + tail, load=load)
 
-    def _obituary(self, runner: _Runner, load: float) -> Outcome | None:
-        tail = self._tail(runner)
+    def _obituary(self, runner: Watched, load: float) -> Outcome | None:
+        tail = runner.tail()
         by_itself = processes.has_exited(runner.pid, GRACE_SECONDS)
         code = self._end(runner)
         if not by_itself:
@@ -320,55 +288,24 @@ class Supervisor:
 
     # Runners ----------------------------------------------------------------------------------------
 
-    def _fork(self, main: Any) -> _Runner:
-        ours, theirs = Pipe()
-        folder = Path(tempfile.mkdtemp(dir=self._folder))
-        output = os.open(folder / ".output", os.O_RDWR | os.O_CREAT | os.O_APPEND | os.O_CLOEXEC, 0o600)
-        os.unlink(folder / ".output")
-        pid = fork_runner(main, theirs, output, folder)
-        theirs.close()
-        poll = select.poll()
-        poll.register(self._main, select.POLLIN)
-        poll.register(ours, select.POLLIN)
-        return _Runner(pid, ours, poll, output, folder)
+    def _fork(self, main: Callable[[Connection], None]) -> Watched:
+        return Watched.fork(main, self._main, self._folder)
 
-    def _end(self, runner: _Runner) -> int:
-        """End a runner with all it started, and return its exit code (minus the signal, if killed)."""
-        if runner.ended:
+    def _end(self, runner: Watched) -> int:
+        """End a runner and whatever it left behind, and return its exit code."""
+        if runner.has_ended:
             return 0
-        runner.ended = True
-        if not processes.has_exited(runner.pid):
-            processes.signal_group(runner.pid, signal.SIGTERM)
-            processes.has_exited(runner.pid, GRACE_SECONDS)
-        # Not yet waited for, the leader keeps the group's number from being given to anybody else.
-        processes.signal_group(runner.pid, signal.SIGKILL)
-        _, status = os.waitpid(runner.pid, 0)
-        self._end_orphans()
-        runner.connection.close()
-        os.close(runner.output)
-        shutil.rmtree(runner.folder, ignore_errors=True)
-        return os.waitstatus_to_exitcode(status)
-
-    def _end_orphans(self) -> None:
+        code = runner.end()
         while orphans := processes.children(os.getpid()) - self._kept():
             for pid in orphans:
                 with contextlib.suppress(ProcessLookupError):
                     os.kill(pid, signal.SIGKILL)
                 with contextlib.suppress(ChildProcessError):
                     os.waitpid(pid, 0)
+        return code
 
     def _kept(self) -> set[int]:
-        return set() if self._steady is None or self._steady.ended else {self._steady.pid}
-
-    def _trim_output(self, runner: _Runner) -> None:
-        if os.fstat(runner.output).st_size > MAX_OUTPUT_BYTES:
-            os.ftruncate(runner.output, 0)
-
-    def _tail(self, runner: _Runner) -> str:
-        size = os.fstat(runner.output).st_size
-        text = os.pread(runner.output, TAIL_BYTES, max(0, size - TAIL_BYTES)).decode(errors="replace")
-        text = text.replace("\0", "?").strip()
-        return f"\n{text}" if text else ""
+        return set() if self._steady is None or self._steady.has_ended else {self._steady.pid}
 
 
 _KILLED_TWICE = Outcome(
@@ -381,7 +318,7 @@ _KILLED_TWICE = Outcome(
 def _time_allowed(learner: Learner | None, is_called: bool) -> float:
     if learner is None:
         return inf
-    return learner.limits.seconds if is_called else LOADING_SECONDS
+    return learner.limits.seconds + SLACK_SECONDS if is_called else LOADING_SECONDS
 
 
 def _over_time(learner: Learner, is_called: bool = True) -> Outcome:

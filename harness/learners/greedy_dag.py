@@ -219,10 +219,18 @@ def _climb(
     space: Workspace,
 ) -> tuple[NDArray[np.bool_], float]:
     # One search from the DAG `start`, [x, y] for x -> y. Returns the DAG that it ends in, and its score.
-    # The first search fills `alone`, the others use it.
+    # The first search fills `alone` (see `Search`), the others use it.
     p = start.shape[0]
     if is_first:
-        _score_pairs(columns, rule, is_equivalent, alone, space)
+        nothing = np.empty(0, dtype=np.int64)
+        is_parent = np.zeros(p, dtype=np.bool_)
+        for y in range(p):
+            # Score-equivalent scores gain the same from x -> y as from y -> x.
+            first = y + 1 if is_equivalent else np.int64(0)
+            alone[y, y] = _score_additions(columns, rule, nothing, y, is_parent, first, alone[y], space)
+            if is_equivalent:
+                for x in range(first, p):
+                    alone[x, y] = alone[y, x]
     state = Search(
         np.zeros((p, p), dtype=np.bool_),
         np.empty((p, max_parents), dtype=np.int64),
@@ -262,23 +270,6 @@ def _climb(
         for v in range(p):
             if v in (x, y) or (before[v] != state.reaches[v]).any():
                 _find_best_addition(state, v)
-
-
-@inlined
-def _score_pairs(
-    columns: Columns, rule: Scoring, is_equivalent: bool, alone: NDArray[np.float64], space: Workspace
-) -> None:
-    # The gains of every variable's first parent, [y, x]; on the diagonal y's score without parents.
-    p = columns.codes.shape[0]
-    nothing = np.empty(0, dtype=np.int64)
-    is_parent = np.zeros(p, dtype=np.bool_)
-    for y in range(p):
-        first = y + 1 if is_equivalent else np.int64(0)
-        own = _score_additions(columns, rule, nothing, y, is_parent, first, alone[y], space)
-        if is_equivalent:
-            for x in range(first, p):
-                alone[x, y] = alone[y, x]
-        alone[y, y] = own
 
 
 @inlined

@@ -117,7 +117,9 @@ def _probe(plan: Plan, works: list[Work], progress: Progress, workers: int, thre
 
 def _first_of_each(works: list[Work]) -> Iterator[Work]:
     """Give every combination once: few rows first, so that much is seen before time is up."""
-    firsts = {work.condition: work for work in reversed(works)}
+    firsts: dict[int, Work] = {}
+    for work in works:
+        firsts.setdefault(work.condition, work)
     numbers = itertools.count()
     for rows in sorted({request.rows for work in firsts.values() for request in work.requests}):
         for work in firsts.values():

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 from generators.errors import InputError
 from generators.files.atomic import atomic_write
 from harness.analysis.means import Summary, summarise
-from harness.studies.reading import Study, runs_table
+from harness.studies.reading import Study, factor_column, runs_table
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -59,7 +59,9 @@ def table_frame(study: Study, table: str) -> pd.DataFrame:
 
     if table == "runs":
         return runs_table(study)
-    return pd.DataFrame([_summary_row(study, summary) for summary in summarise(study.runs)])
+    rows = [_summary_row(study, summary) for summary in summarise(study.runs)]
+    levels = {name: factor_column([row[name] for row in rows]) for name in study.runs.factors}
+    return pd.DataFrame(rows).assign(**levels)
 
 
 def _summary_row(study: Study, summary: Summary) -> dict[str, Any]:

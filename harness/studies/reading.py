@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -73,9 +73,9 @@ def read_study(path: Path | str) -> Study:
         rows = ledger.run_rows()
         sessions = ledger.sessions()
     learners = tuple(_learner(fields) for fields in expansion["learners"])
-    conditions = tuple(_condition(fields) for fields in expansion["conditions"])
+    factors = tuple(expansion["factors"])
+    conditions = tuple(_condition(fields, factors) for fields in expansion["conditions"])
     own = _own_runs(rows, expansion, learners, conditions)
-    factors = tuple(dict.fromkeys(name for condition in conditions for name in condition.factors))
     frame = _frame(own, conditions, factors)
     n_settled = int((frame["status"] != Status.INTERRUPTED.value).sum())
     facts = StudyFacts(
@@ -102,6 +102,13 @@ def runs_table(study: Study) -> pd.DataFrame:
     table = study.runs.frame[[*front, *back, "undefined", "session", "graph"]].copy()
     table["undefined"] = [canonical_json(reasons) for reasons in table["undefined"]]
     return table
+
+
+def factor_column(values: list[Any]) -> pd.Series[Any]:
+    """Return the levels of a factor as a column; whole numbers stay whole where some conditions have none."""
+    import pandas as pd
+
+    return pd.Series(values, dtype=object) if None in values else pd.Series(values)
 
 
 def run_name(dataset: bytes, distortions: str, rows: int, learner: bytes) -> str:
@@ -148,7 +155,10 @@ def _frame(
             run_name(row["dataset"], row["distortions"], row["rows"], row["learner"].key) for row in rows
         ],
         "condition": [row["condition"] for row in rows],
-        **{name: [conditions[row["condition"]].factors.get(name) for row in rows] for name in factors},
+        **{
+            name: factor_column([conditions[row["condition"]].factors.get(name) for row in rows])
+            for name in factors
+        },
         "rows": [row["rows"] for row in rows],
         "network": [row["network"].hex()[:SHORT_KEY] for row in rows],
         "replicate": [row["replicate"] for row in rows],
@@ -176,8 +186,10 @@ def _learner(fields: Mapping[str, Any]) -> Learner:
     return Learner(**{**fields, "key": bytes.fromhex(fields["key"]), "limits": Limits(**fields["limits"])})
 
 
-def _condition(fields: Mapping[str, Any]) -> Condition:
-    return Condition(**{name: value for name, value in fields.items() if name != "network_keys"})
+def _condition(fields: Mapping[str, Any], factors: Sequence[str]) -> Condition:
+    plain = {name: value for name, value in fields.items() if name != "network_keys"}
+    levels = {name: fields["factors"][name] for name in factors if name in fields["factors"]}
+    return Condition(**{**plain, "factors": levels})
 
 
 def _requirement(fields: Mapping[str, Any]) -> Requirement:

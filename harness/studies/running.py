@@ -213,6 +213,8 @@ def expansion(plan: Plan, keys: Mapping[int, list[bytes]]) -> dict[str, Any]:
         "seed": plan.seed,
         "rows": list(plan.rows),
         "requirement": asdict(plan.requirement),
+        # In the plan's order, which the keys of JSON objects do not keep.
+        "factors": list(dict.fromkeys(name for condition in plan.conditions for name in condition.factors)),
         "learners": [{**asdict(learner), "settings": dict(learner.settings)} for learner in plan.learners],
         "conditions": [
             {**asdict(condition), "network_keys": keys[position]}

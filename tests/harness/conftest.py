@@ -13,8 +13,8 @@ import pytest
 from generators.streams import digest
 from harness.analysis.runs import Runs
 from harness.records import Bound, Condition, Learner, Limits, Requirement
-from harness.studies.facts import StudyFacts
 from harness.scorers.registry import MEASURES
+from harness.studies.facts import StudyFacts
 
 REQUIREMENT = Requirement((Bound("skeleton_recall", ">=", 0.7), Bound("skeleton_precision", ">=", 0.8)), 0.8)
 

@@ -25,7 +25,7 @@ import pytest
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.network import Cpt, Network
-from harness.execution import local, supervisor
+from harness.execution import local, supervisor, watched
 from harness.ledger.store import Ledger
 from harness.plan.schema import Plan, expected_runs, read_plan
 from harness.records import MachineStop
@@ -980,7 +980,7 @@ def test_full_disk_stops_the_work_and_it_resumes(
 
 def test_limits_of_the_watch_are_consistent() -> None:
     """Looking is more frequent than the grace, which is shorter than what the main process waits."""
-    assert 0 < supervisor.POLL_SECONDS < supervisor.GRACE_SECONDS < local.END_SECONDS
+    assert 0 < supervisor.POLL_SECONDS < watched.GRACE_SECONDS < local.END_SECONDS
 
 
 def test_summary_counts_what_the_plan_expects(tmp_path: Path) -> None:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import contextlib
 import hashlib
+import itertools
 import json
 import os
 import resource
@@ -24,6 +25,8 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from generators.errors import InputError
 from generators.graph import Graph
@@ -37,6 +40,8 @@ from harness.ledger.store import (
     KnownRun,
     Ledger,
     RunKey,
+    edge_positions,
+    graph_of,
     graph_text,
     named_edges,
 )
@@ -372,6 +377,35 @@ def test_edges_are_stored_by_position_and_come_back_with_names() -> None:
 
     assert json.loads(text) == [[0, 1, 1], [1, 2, 0]]
     assert named_edges(text, ["a", "b", "c"]) == [["a", "b", "directed"], ["b", "c", "undirected"]]
+
+
+MARKS = st.sampled_from(["none", "forth", "back", "undirected"])
+
+
+@given(
+    marks=st.integers(1, 6).flatmap(
+        lambda p: st.lists(MARKS, min_size=p * (p - 1) // 2, max_size=p * (p - 1) // 2)
+    )
+)
+def test_any_graph_comes_back_from_its_positions(marks: list[str]) -> None:
+    """What is stored of a graph gives the same graph again, with its edges in the graph's own order."""
+    n = next(p for p in range(1, 7) if p * (p - 1) // 2 == len(marks))
+    names = tuple("abcdef"[:n])
+    pairs = dict(zip(itertools.combinations(names, 2), marks, strict=True))
+    graph = Graph.from_edges(
+        names,
+        directed=[
+            pair if mark == "forth" else pair[::-1]
+            for pair, mark in pairs.items()
+            if mark in ("forth", "back")
+        ],
+        undirected=[pair for pair, mark in pairs.items() if mark == "undirected"],
+    )
+
+    positions = edge_positions(graph)
+
+    assert graph_of(positions, names) == graph
+    assert named_edges(graph_text(graph), names) == [list(edge) for edge in graph.edges()]
 
 
 # One writer -----------------------------------------------------------------------------------------
