@@ -633,7 +633,7 @@ def test_a_run_over_time_is_asked_again_with_more_time_only(tmp_path: Path) -> N
 def undisturbed(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, pd.DataFrame]:
     """Give a plan's folder whose runs take a while, and its runs when nobody disturbs them."""
     folder = tmp_path_factory.mktemp("undisturbed")
-    plan = write_plan(folder, {"drawn": {"pause": 0.03}, "leaves_children": {}}, replicates=8, rows=(20, 40))
+    plan = write_plan(folder, {"drawn": {"pause": 0.1}, "leaves_children": {}}, replicates=8, rows=(20, 40))
     return folder, comparable(run_plan(plan, folder / "whole.ledger", n_workers=2).ledger)
 
 
