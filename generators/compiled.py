@@ -9,6 +9,7 @@ where nothing is writable, kernels are compiled in memory.
 from __future__ import annotations
 
 import contextlib
+import fcntl
 import functools
 import hashlib
 import os
@@ -62,7 +63,7 @@ def kernel(function: Kernel) -> Kernel:
 def inlined(function: Kernel) -> Kernel:
     """Compile a small function that is only called from kernels; it is never cached by itself."""
     # No wrappers to call it from Python or C: a sixth of the compilation.
-    return numba.njit(  # type: ignore[no-any-return]
+    return numba.njit(  # type: ignore[call-overload, no-any-return]
         function, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True
     )
 
@@ -76,21 +77,34 @@ def warm_up(function: Callable[[], None]) -> Callable[[], None]:
     return function
 
 
-def warm_all(place: int = 0, n_places: int = 1) -> None:
+def warm_all() -> None:
     """Run every registered warm-up, and note that this cache is complete.
 
-    Parameters
-    ----------
-    place, n_places : int
-        Of several processes that warm up at the same time: each begins elsewhere, so that on an empty
-        cache each compiles its share, and finds the others' when it comes to them.
+    Several processes may do so at the same time: each leaves to the others what they are at, and comes
+    back to find it in the cache.
     """
-    first = place * len(_warm_ups) // n_places
-    for function in [*_warm_ups[first:], *_warm_ups[:first]]:
-        function()
     folder = cache_folder()
+    left_to_others = [function for function in _warm_ups if not _run_alone(function, folder, waits=False)]
+    for function in left_to_others:
+        _run_alone(function, folder, waits=True)
     if folder is not None:
         (folder / _READY).touch()
+
+
+def _run_alone(function: Callable[[], None], folder: Path | None, *, waits: bool) -> bool:
+    """Run a warm-up while no other process runs it; without waiting, say whether it was run."""
+    if folder is None:
+        function()
+        return True
+    with (folder / f"{function.__module__}.lock").open("w") as file:
+        try:
+            fcntl.flock(file, fcntl.LOCK_EX | (0 if waits else fcntl.LOCK_NB))
+        except BlockingIOError:
+            return False
+        except OSError:  # a file system without locks: compiled twice, at worst
+            pass
+        function()
+    return True
 
 
 def is_warm() -> bool:
@@ -134,7 +148,8 @@ def _sources_digest() -> str:
             text = file.read_bytes()
             if b"compiled import" in text:
                 hasher.update(file.relative_to(root).as_posix().encode() + b"\0" + text)
-    parts = (numba.__version__, numba_config.CPU_NAME or "", platform.machine(), _processor())
+    # The place counts too: numba files machine code under the path of its source.
+    parts = (str(root), numba.__version__, numba_config.CPU_NAME or "", platform.machine(), _processor())
     hasher.update("\0".join(map(str, parts)).encode())
     return hasher.hexdigest()[:16]
 

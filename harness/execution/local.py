@@ -129,7 +129,7 @@ class LocalEngine:
             If workers keep dying.
         """
         source = iter(works)
-        self._workers += [self._start(place) for place in range(self._n_workers)]
+        self._workers += [self._start() for _ in range(self._n_workers)]
         told_to_stop = False
         while True:
             if self._is_stopping and not told_to_stop:
@@ -250,8 +250,7 @@ class LocalEngine:
         if not self._is_stopping:
             self._workers.append(self._start())
 
-    def _start(self, place: int = 0) -> _Worker:
-        """Start the worker that begins at this place of what there may be to compile."""
+    def _start(self) -> _Worker:
         ours, theirs = socket.socketpair()
         ours.setsockopt(socket.SOL_SOCKET, socket.SO_SNDBUF, BUFFER_BYTES)
         arguments = [str(_ROOT), str(theirs.fileno()), str(os.getpid())]
@@ -276,7 +275,7 @@ class LocalEngine:
         connection = Connection(ours.detach())
         # Where this process finds a learner's module, so must that one.
         path = [os.path.abspath(place) for place in sys.path if os.path.exists(place or os.curdir)]
-        connection.send((self._learners, path, (place, self._n_workers)))
+        connection.send((self._learners, path))
         return _Worker(process, connection, errors, mark)
 
 

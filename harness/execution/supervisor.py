@@ -65,11 +65,9 @@ class Supervisor:
         To the main process.
     learners : tuple of Learner
         All of the plan, in its order.
-    share : tuple of int
-        Its place among the supervisors that start together, and how many they are: each compiles its share.
     """
 
-    def __init__(self, main: Connection, learners: tuple[Learner, ...], share: tuple[int, int]) -> None:
+    def __init__(self, main: Connection, learners: tuple[Learner, ...]) -> None:
         self._main = main
         self._learners = learners
         self._queue: deque[Work] = deque()
@@ -84,7 +82,7 @@ class Supervisor:
         self._specifications = {
             i: built_in(learner.method) for i, learner in enumerate(learners) if not needs_isolation(learner)
         }
-        _warm_up(*share)
+        _warm_up()
         gc.collect()
         gc.freeze()  # a runner's collections would copy every page of this
         self._folder = tempfile.mkdtemp(prefix="arcassay-")  # holds the working folders of runners
@@ -335,18 +333,15 @@ def _signal_name(number: int) -> str:
         return str(number)
 
 
-def _warm_up(place: int, n_places: int) -> None:
-    """Compile what is not in the cache in a child, whose memory is not that of every runner to come.
-
-    The first `n_places` supervisors begin at different places, and find each other's work in the cache.
-    """
+def _warm_up() -> None:
+    """Compile what is not in the cache in a child, whose memory is not that of every runner to come."""
     if not compiled.is_warm():
         parent = os.getpid()
         pid = os.fork()
         if not pid:
             try:
                 processes.die_with_parent(parent)
-                compiled.warm_all(place, n_places)
+                compiled.warm_all()
             finally:
                 os._exit(0)
         os.waitpid(pid, 0)
@@ -363,9 +358,9 @@ def main(file: int, parent: int) -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _end_in_order)
     connection = Connection(file)
-    learners, path, share = connection.recv()
+    learners, path = connection.recv()
     sys.path += [place for place in path if place not in sys.path]
-    supervisor = Supervisor(connection, learners, share)
+    supervisor = Supervisor(connection, learners)
     processes.adopt_orphans()
     processes.survive_parent()
     supervisor.serve()
