@@ -34,7 +34,7 @@ class LiveWatcher(Watcher):
         """Say that the first start takes longer, and why."""
         self._compiling_since = time.monotonic()
         say(
-            "Compiling the numerical kernels, once for this version and machine (about a minute) ...",
+            "Compiling the numerical kernels, once for this version and machine (one to two minutes) ...",
             quiet=self._quiet,
         )
 

@@ -39,7 +39,7 @@ def demo(folder: Path, workers: int | None, as_json: bool, quiet: bool) -> int:
     """Run the packaged demonstration, and write its report.
 
     An apiary's winter-loss survey, invented for this purpose: a dozen variables, seven learners, a
-    hundred networks of their kind. About a minute on two cores, and once more that for compiling.
+    hundred networks of their kind. About a minute on two cores; the first time also one to two of compiling.
     """
     from harness.studies.demonstration import write_demo_plan
 
