@@ -233,12 +233,12 @@ def to_answer(specification: Specification, returned: Any, names: tuple[str, ...
 
 
 def _to_graph(returned: Any, names: tuple[str, ...]) -> Graph:
+    if isinstance(returned, Graph):
+        return returned
     import networkx as nx
     import pandas as pd
 
     try:
-        if isinstance(returned, Graph):
-            return returned
         if isinstance(returned, nx.DiGraph):
             return Graph.from_networkx(returned, names)
         if isinstance(returned, pd.DataFrame):

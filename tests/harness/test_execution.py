@@ -983,6 +983,7 @@ def test_limits_of_the_watch_are_consistent() -> None:
     assert 0 < supervisor.POLL_SECONDS < watched.GRACE_SECONDS < local.END_SECONDS
 
 
+@slow
 def test_summary_counts_what_the_plan_expects(tmp_path: Path) -> None:
     """`expected_runs` of a plan is what an empty ledger is asked for."""
     path = write_plan(tmp_path, ("empty",), replicates=2, rows=(20, 40))
