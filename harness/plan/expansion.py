@@ -72,6 +72,8 @@ def expand(networks: Section, data: Section, seed: int, folder: Path) -> tuple[C
     levels = list({canonical_json(level): level for level in found}.values())
     for level in levels:
         _try_out(networks, level, seed)
+    if given:
+        _refuse_twins(networks, given[0], levels)
     return tuple(
         Condition(level, {}, factors, replicates, datasets)
         for level, factors in zip(levels, _factors(levels, networks.content), strict=True)
@@ -298,6 +300,16 @@ def _effective(section: Section, level: Mapping[str, Any]) -> Networks:
             elif value is not None:
                 effective[name] = setting.parse(value)
     return effective
+
+
+def _refuse_twins(section: Section, key: str, levels: Sequence[Networks]) -> None:
+    """Refuse a network that is given twice: its content is its identity, so its runs would be the same."""
+    first: dict[bytes, str] = {}
+    for level in levels:
+        content = given_network(level).key()
+        if content in first:
+            section.fault(key, f"{Path(level[key]).name!r} is the same network as {first[content]!r}")
+        first.setdefault(content, Path(level[key]).name)
 
 
 def _try_out(section: Section, networks: Networks, seed: int) -> None:

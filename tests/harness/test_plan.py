@@ -312,9 +312,9 @@ def test_given_networks_come_from_files_beside_the_plan(folder: Path) -> None:
 )
 def test_files_of_one_stem_are_told_apart(folder: Path, paths: tuple[str, ...], expected: list[str]) -> None:
     """As much of the path is shown as makes the levels differ."""
-    for path in paths:
+    for path, name in zip(paths, ("sprinkler", "burglary"), strict=True):
         (folder / path).parent.mkdir(exist_ok=True)
-        write_network(published_network("sprinkler"), folder / path)
+        write_network(published_network(name), folder / path)
 
     plan = parsed(folder, networks=f"file = {list(paths)}")
 
@@ -874,3 +874,17 @@ def test_deep_nesting_is_refused() -> None:
     """A text that would exhaust the stack is an input error."""
     with pytest.raises(InputError, match=r"^plan: is nested too deeply\.$"):
         parse_plan(f"title = {'[' * 100_000}")
+
+
+def test_a_network_given_twice_is_refused(tmp_path: Path) -> None:
+    """Two files that hold one network, in whatever format, are one condition too many."""
+    for name in ("one.bif", "two.json"):
+        write_network(published_network("sprinkler"), tmp_path / name)
+    (tmp_path / "plan.toml").write_text(
+        '[networks]\nfile = ["one.bif", "two.json"]\n[[learner]]\nmethod = "no-arcs"\n'
+    )
+
+    with pytest.raises(InputError) as caught:
+        read_plan(tmp_path / "plan.toml")
+
+    assert caught.value.faults == ("plan.toml: networks.file: 'two.json' is the same network as 'one.bif'.",)
