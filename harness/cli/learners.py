@@ -2,16 +2,13 @@
 
 from __future__ import annotations
 
-import secrets
 from pathlib import Path
 from typing import Any
 
 import click
 
 from generators.errors import InputError
-from harness.cli.output import examples, print_json, say, shared_options
-
-SEED_BITS = 32
+from harness.cli.output import examples, print_json, say, seed_or_drawn, shared_options
 
 
 @click.command(
@@ -78,10 +75,7 @@ def learn(
             raise InputError("learn: --label goes with --from")
         specification = find_specification(method)
         parsed = parse_settings(specification, parse_assignments(settings))
-    if seed is None:
-        seed = secrets.randbits(SEED_BITS)
-        if specification.takes_rng:
-            say(f"Seed {seed}", quiet=quiet)
+    seed = seed_or_drawn(seed, quiet=quiet or not specification.takes_rng)
     try:
         graph = call(specification, rows, parsed, np.random.default_rng(seed)).graph
     except Declined as error:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import secrets
 import textwrap
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -10,13 +9,12 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from generators.errors import InputError
-from harness.cli.output import examples, print_json, say, shared_options, width
+from harness.cli.output import examples, print_json, say, seed_or_drawn, shared_options, width
 
 if TYPE_CHECKING:
     from generators.network import Network
 
 SEED = click.option("--seed", type=click.IntRange(0), help="Drawn and printed if absent.")
-SEED_BITS = 32
 
 
 @click.command("list", epilog=examples("arcassay list", "arcassay list learners pc"))
@@ -86,7 +84,7 @@ def generate(
     from generators.topologies import TOPOLOGIES, generate_graph
     from harness.cli.learners import parse_assignments
 
-    seed = _seed(seed, quiet)
+    seed = seed_or_drawn(seed, quiet=quiet)
     given = parse_assignments(settings)
     own = set(CPT_FAMILIES[cpts].settings) if cpts in CPT_FAMILIES else set()
     of_topology = set(TOPOLOGIES[topology].settings) if topology in TOPOLOGIES else set()
@@ -176,7 +174,7 @@ def sample(file: str, rows: int, seed: int | None, output: Path, as_json: bool, 
     from generators.files import write_data
 
     found = _network(file, quiet)
-    seed = _seed(seed, quiet)
+    seed = seed_or_drawn(seed, quiet=quiet)
     write_data(found.sample(rows, rng=np.random.default_rng(seed)), output)
     if as_json:
         print_json({"written": str(output), "seed": seed, "rows": rows})
@@ -200,13 +198,6 @@ def _network(file: str, quiet: bool = True) -> Network:
         f"{file}: is neither a network file ({', '.join(NETWORK_FORMATS)}) nor a published network "
         f"({', '.join(CATALOGUE)}).{hint}"
     )
-
-
-def _seed(seed: int | None, quiet: bool) -> int:
-    if seed is None:
-        seed = secrets.randbits(SEED_BITS)
-        say(f"Seed {seed}", quiet=quiet)
-    return seed
 
 
 def _facts(found: Network) -> dict[str, Any]:

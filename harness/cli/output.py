@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import secrets
 import shutil
 import sys
 from collections.abc import Callable
@@ -11,6 +12,7 @@ from typing import Any, TypeVar
 
 import click
 
+SEED_BITS = 32
 Command = TypeVar("Command", bound=Callable[..., Any])
 
 
@@ -36,6 +38,14 @@ def say(text: str, *, quiet: bool = False) -> None:
     """Print a remark on standard error."""
     if not quiet:
         click.echo(text, err=True)
+
+
+def seed_or_drawn(seed: int | None, *, quiet: bool) -> int:
+    """Return the given seed, or one that is drawn and said, so that what follows can be repeated."""
+    if seed is None:
+        seed = secrets.randbits(SEED_BITS)
+        say(f"Seed {seed}", quiet=quiet)
+    return seed
 
 
 def complain(text: str) -> None:
