@@ -16,6 +16,7 @@ ROOT = Path(__file__).parent.parent
 RANKS = {
     "generators": 0,
     "harness.records": 1,
+    "harness.knowledge": 1,
     "harness.counts": 2,
     "harness.independence": 2,
     "harness.family_scores": 2,
