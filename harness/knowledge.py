@@ -136,7 +136,8 @@ def _backward(
                 faults.append(f"stages: {name!r} stands in two places.")
             else:
                 time[position[name]] = number
-    return np.greater.outer(time, time)
+    later: NDArray[np.bool_] = np.greater.outer(time, time)
+    return later
 
 
 def _paths(arcs: NDArray[np.bool_], order: tuple[int, ...]) -> NDArray[np.bool_]:
