@@ -20,6 +20,8 @@ from generators.compiled import inlined, kernel, warm_up
 from generators.errors import InputError
 from generators.graph import Graph
 
+NO_TRIPLES = np.empty(0, dtype=np.int64)
+
 
 class ClassLists(NamedTuple):
     """A graph, a consistent extension of it, and the CPDAG of that extension, as neighbour lists.
@@ -158,7 +160,7 @@ def maximally_oriented(graph: Graph) -> Graph:
     Graph(4 variables: a -> c, b -> c, c -> d)
     """
     arrow = np.array(graph.arrow)
-    meek_rules(arrow)
+    meek_rules(arrow, NO_TRIPLES)
     return Graph(graph.names, arrow)
 
 
@@ -244,7 +246,7 @@ def collider_triples(arrow: Arrow, at: Offsets, nodes: Nodes) -> NDArray[np.int6
 
 
 @kernel
-def meek_rules(arrow: Arrow) -> None:
+def meek_rules(arrow: Arrow, ambiguous: NDArray[np.int64]) -> None:
     """Direct undirected edges by Meek's four rules until none applies, in place.
 
     An undirected edge a - b becomes a -> b where, for some c and d (Meek 1995),
@@ -253,6 +255,10 @@ def meek_rules(arrow: Arrow) -> None:
     2. a -> c -> b;
     3. a - c -> b and a - d -> b, and c and d are not adjacent;
     4. a - c -> d -> b, a and d are adjacent, and c and b are not.
+
+    Rules 1, 3 and 4 rest on a variable between two that are not adjacent being no collider: a between c
+    and b in rules 1 and 4, between c and d in rule 3. Where that is not known they are not applied (Colombo
+    and Maathuis 2014).
 
     Rule 4 never applies to a skeleton with just its unshielded colliders directed; it is needed only
     where background knowledge has directed more.
@@ -267,6 +273,9 @@ def meek_rules(arrow: Arrow) -> None:
     ----------
     arrow : bool array, shape (p, p), C-contiguous
         [i, j] for i -> j, both directions for an undirected edge.
+    ambiguous : int64 array, ascending
+        (x p + z) p + y, x < y, for each variable z of which it is not known whether it is a collider
+        between x and y; `NO_TRIPLES` where there is none.
     """
     at, nodes = neighbour_lists(arrow)
     p = arrow.shape[0]
@@ -284,22 +293,26 @@ def meek_rules(arrow: Arrow) -> None:
         done += 1
         for b in nodes[at[3 * y] : at[3 * y + 3]]:
             if arrow[y, b] and arrow[b, y]:
-                if b != x and not arrow[x, b] and not arrow[b, x]:
+                if b != x and not arrow[x, b] and not arrow[b, x] and _is_clear(ambiguous, p, x, y, b):
                     n = _direct(arrow, y, b, source, target, n)  # rule 1: x -> y - b
             elif arrow[y, b]:
                 if arrow[x, b] and arrow[b, x]:
                     n = _direct(arrow, x, b, source, target, n)  # rule 2: x -> y -> b
                 elif not arrow[x, b] and not arrow[b, x]:
-                    n = _rule_4(arrow, x, y, b, nodes[at[3 * x] : at[3 * x + 3]], source, target, n)
+                    around_x = nodes[at[3 * x] : at[3 * x + 3]]
+                    n = _rule_4(arrow, x, y, b, around_x, ambiguous, source, target, n)
         for a in nodes[at[3 * x] : at[3 * x + 3]]:
             is_free = arrow[a, y] and arrow[y, a]
             if arrow[a, x] and not arrow[x, a]:
                 if is_free:
                     n = _direct(arrow, a, y, source, target, n)  # rule 2: a -> x -> y
                 elif not arrow[a, y] and not arrow[y, a]:
-                    n = _rule_4(arrow, a, x, y, nodes[at[3 * a] : at[3 * a + 3]], source, target, n)
-            elif arrow[a, x] and is_free and _rule_3(arrow, a, x, y, nodes[at[3 * a] : at[3 * a + 3]]):
-                n = _direct(arrow, a, y, source, target, n)
+                    around_a = nodes[at[3 * a] : at[3 * a + 3]]
+                    n = _rule_4(arrow, a, x, y, around_a, ambiguous, source, target, n)
+            elif arrow[a, x] and is_free:
+                around_a = nodes[at[3 * a] : at[3 * a + 3]]
+                if _rule_3(arrow, a, x, y, around_a, ambiguous):
+                    n = _direct(arrow, a, y, source, target, n)
 
 
 @inlined
@@ -311,22 +324,48 @@ def _direct(arrow: Arrow, a: int, b: int, source: Nodes, target: Nodes, n: int) 
 
 
 @inlined
-def _rule_3(arrow: Arrow, a: int, c: int, b: int, around_a: Nodes) -> bool:
+def _is_clear(ambiguous: NDArray[np.int64], p: int, x: int, z: int, y: int) -> bool:
+    if ambiguous.shape[0] == 0:
+        return True
+    triple = (np.int64(min(x, y)) * p + np.int64(z)) * p + np.int64(max(x, y))
+    low, high = 0, ambiguous.shape[0]
+    while low < high:
+        middle = (low + high) // 2
+        if ambiguous[middle] < triple:
+            low = middle + 1
+        else:
+            high = middle
+    return bool(low == ambiguous.shape[0] or ambiguous[low] != triple)
+
+
+@inlined
+def _rule_3(arrow: Arrow, a: int, c: int, b: int, around_a: Nodes, ambiguous: NDArray[np.int64]) -> bool:
     """Whether there is a d with a - d -> b, not adjacent to c; a - c -> b and a - b are known."""
     for d in around_a:
         is_between = arrow[a, d] and arrow[d, a] and arrow[d, b] and not arrow[b, d]
-        if is_between and d != c and not arrow[c, d] and not arrow[d, c]:
+        is_unshielded = d != c and not arrow[c, d] and not arrow[d, c]
+        if is_between and is_unshielded and _is_clear(ambiguous, arrow.shape[0], c, a, d):
             return True
     return False
 
 
 @inlined
 def _rule_4(
-    arrow: Arrow, c: int, d: int, b: int, around_c: Nodes, source: Nodes, target: Nodes, n: int
+    arrow: Arrow,
+    c: int,
+    d: int,
+    b: int,
+    around_c: Nodes,
+    ambiguous: NDArray[np.int64],
+    source: Nodes,
+    target: Nodes,
+    n: int,
 ) -> int:
     """Direct every a -> b with a - c, a - b, and a and d adjacent; c -> d -> b, not adjacent, is known."""
     for a in around_c:
-        if arrow[a, c] and arrow[c, a] and arrow[a, b] and arrow[b, a] and (arrow[a, d] or arrow[d, a]):
+        is_free = arrow[a, c] and arrow[c, a] and arrow[a, b] and arrow[b, a]
+        is_shielded = arrow[a, d] or arrow[d, a]
+        if is_free and is_shielded and _is_clear(ambiguous, arrow.shape[0], c, a, b):
             n = _direct(arrow, a, b, source, target, n)
     return n
 

@@ -12,7 +12,8 @@ from generators.dataset import Dataset
 from generators.graph import Graph
 from generators.settings import Between
 from harness.counts import prepare
-from harness.independence import Test, dependent_pairs, pair_statistics
+from harness.independence.statistics import dependent_pairs, pair_statistics
+from harness.independence.tables import Statistic
 from harness.learners.specification import learner
 
 TIE = 1e-10  # nats; rounding errors of a mutual information are far smaller, real differences far larger
@@ -20,7 +21,7 @@ TIE = 1e-10  # nats; rounding errors of a mutual information are far smaller, re
 
 @learner("pairwise", returns="skeleton", reference="baseline: marginal dependence", baseline=True)
 def pairwise(
-    data: Dataset, *, alpha: Annotated[float, Between(0, 1, inside=True)] = 0.01, test: Test = "g2"
+    data: Dataset, *, alpha: Annotated[float, Between(0, 1, inside=True)] = 0.01, test: Statistic = "g2"
 ) -> Graph:
     """Join every pair of variables that a test finds dependent.
 

@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 from generators.adjacency import Nodes, Offsets, neighbour_lists
-from generators.classes import class_lists, cpdag, meek_rules, unshielded_colliders
+from generators.classes import NO_TRIPLES, class_lists, cpdag, meek_rules, unshielded_colliders
 from generators.compiled import kernel
 from generators.graph import Graph
 from generators.separation import is_connected, is_separated
@@ -73,9 +73,9 @@ def test_meek_rules(benchmark: Any, rng: np.random.Generator, p: int) -> None:
     arrow = graph.skeleton.copy()
     for a, c, b in unshielded_colliders(graph).tolist():
         arrow[c, a] = arrow[c, b] = False
-    meek_rules(arrow.copy())
+    meek_rules(arrow.copy(), NO_TRIPLES)
 
-    benchmark(lambda: meek_rules(arrow.copy()))
+    benchmark(lambda: meek_rules(arrow.copy(), NO_TRIPLES))
 
     yardstick = median_seconds(lambda: np.nonzero(arrow), 200)
     benchmark.extra_info["ratio to np.nonzero"] = benchmark.stats["median"] / yardstick

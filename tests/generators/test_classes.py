@@ -12,6 +12,7 @@ import pytest
 from numpy.typing import NDArray
 
 from generators.classes import (
+    NO_TRIPLES,
     class_of,
     consistent_extension,
     cpdag,
@@ -309,7 +310,7 @@ def test_meek_rules_find_all_that_background_knowledge_implies() -> None:
                     for (i, j), is_forward in zip(chosen, directions):
                         arrow[(j, i) if is_forward else (i, j)] = False
 
-                    meek_rules(arrow)
+                    meek_rules(arrow, NO_TRIPLES)
 
                     assert np.array_equal(np.any([dag.arrow for dag in dags], axis=0), arrow)
                     n_cases += 1

@@ -15,8 +15,12 @@ from generators.dataset import Dataset, View
 from generators.graph import Graph
 from generators.network import Cpt, Network
 from harness.counts import count_plain, prepare
-from harness.independence import independence_test
-from harness.learners.constraint import find_colliders, find_skeleton, pc
+from harness.independence.evidence import data_tests
+from harness.independence.tables import independence_test
+from harness.knowledge import Knowledge
+from harness.learners.constraint import pc
+from harness.learners.orientation import find_colliders
+from harness.learners.skeleton import find_skeleton
 
 
 def dataset_of(codes: np.ndarray, cardinalities: list[int]) -> Dataset:
@@ -52,76 +56,137 @@ class Plain:
 
     adjacent: np.ndarray
     separators: dict[tuple[int, int], tuple[int, ...]]
-    colliders: list[tuple[int, int, int]]
+    colliders: set[tuple[int, int, int]]
+    ambiguous: set[tuple[int, int, int]]
     arrow: np.ndarray
 
 
-def plain_pc(
-    data: Dataset, alpha: float, test: str, min_per_cell: float = 0, max_conditioning: int | None = None
-) -> Plain:
-    """Run PC in plain Python, with numpy tables and scipy quantiles."""
-    columns = prepare(data)
-    p, sizes = data.n_variables, data.cardinalities.tolist()
+class PlainPc:
+    """PC in plain Python, with numpy tables and scipy quantiles."""
 
-    def test_of(x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
-        table = count_plain(columns, [*given, x, y])
-        result = independence_test(table.reshape(-1, *table.shape[-2:]), test=test)
+    def __init__(
+        self,
+        data: Dataset,
+        *,
+        alpha: float,
+        test: str = "g2",
+        min_per_cell: float = 0,
+        max_conditioning: int | None = None,
+        updates: str = "after-level",
+        colliders: str = "plain",
+        knowledge: Knowledge | None = None,
+    ) -> None:
+        self.data, self.columns, self.sizes = data, prepare(data), data.cardinalities.tolist()
+        self.alpha, self.test, self.min_per_cell, self.rule = alpha, test, min_per_cell, colliders
+        p = data.n_variables
+        self.most = p if max_conditioning is None else max_conditioning
+        known = knowledge or Knowledge.of(data.names)
+        self.told = known.arcs | known.arcs.T
+        self.excluded = known.excluded & ~np.eye(p, dtype=bool)
+        self.strength = np.zeros((p, p))
+        for x, y in combinations(range(p), 2):
+            self.strength[x, y] = self.strength[y, x] = self.test_of(x, y, ())[0]
+        self.adjacent = np.zeros((p, p), dtype=bool)
+        for x, y in combinations(range(p), 2):
+            is_gone = self.excluded[x, y] and self.excluded[y, x]
+            self.join(x, y, self.told[x, y] or (not is_gone and not self.separates(x, y, ())))
+        self.separators: dict[tuple[int, int], tuple[int, ...]] = {}
+        (self.level_by_level if updates == "after-level" else self.one_by_one)()
+
+    def join(self, x: int, y: int, is_adjacent: bool) -> None:
+        self.adjacent[x, y] = self.adjacent[y, x] = is_adjacent
+
+    def test_of(self, x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
+        table = count_plain(self.columns, [*given, x, y])
+        result = independence_test(table.reshape(-1, *table.shape[-2:]), test=self.test)
         return round(result.statistic, 6), result.df
 
-    def separates(x: int, y: int, given: tuple[int, ...]) -> bool:
-        statistic, df = test_of(x, y, given)
-        cells = np.prod([float(sizes[v]) for v in (*given, x, y)])
-        if df > 0 and data.n_rows < min_per_cell * cells:
+    def separates(self, x: int, y: int, given: tuple[int, ...]) -> bool:
+        statistic, df = self.test_of(x, y, given)
+        cells = np.prod([float(self.sizes[v]) for v in (*given, x, y)])
+        if df > 0 and self.data.n_rows < self.min_per_cell * cells:
             return False
-        return df == 0 or statistic <= chi2.isf(alpha, df)
+        return df == 0 or statistic <= chi2.isf(self.alpha, df)
 
-    strength = np.zeros((p, p))
-    for x, y in combinations(range(p), 2):
-        strength[x, y] = strength[y, x] = test_of(x, y, ())[0]
-    turn = sorted(range(p), key=lambda x: (round(strength[x].sum(), 6), x))
-    adjacent = np.zeros((p, p), dtype=bool)
-    for x, y in combinations(range(p), 2):
-        adjacent[x, y] = adjacent[y, x] = not separates(x, y, ())
-    separators: dict[tuple[int, int], tuple[int, ...]] = {}
-    k = 1
-    while (max_conditioning is None or k <= max_conditioning) and adjacent.sum(axis=0).max(initial=0) > k:
-        near = [
-            sorted(np.flatnonzero(adjacent[x]).tolist(), key=lambda y: (-strength[x, y], y)) for x in range(p)
-        ]
-        for a, b in combinations(range(p), 2):
-            if adjacent[a, b]:
-                first, second = sorted((a, b), key=turn.index)
-                sets = [s for s in combinations(near[first], k) if second not in s]
-                sets += [s for s in combinations(near[second], k) if first not in s]
-                found = next((s for s in sets if separates(a, b, s)), None)
-                if found is not None:
-                    separators[a, b] = found
-        for pair, given in separators.items():
-            if len(given) == k:
-                adjacent[pair] = adjacent[pair[::-1]] = False
-        k += 1
+    def candidates(self, x: int) -> list[int]:
+        """Return what may stand in the sets of x now, in the order of the columns."""
+        return [w for w in np.flatnonzero(self.adjacent[x]).tolist() if not self.excluded[w, x]]
 
-    colliders = [
-        (x, z, y)
-        for z in range(p)
-        for x, y in combinations(np.flatnonzero(adjacent[z]).tolist(), 2)
-        if not adjacent[x, y] and z not in separators.get((x, y), ())
-    ]
-    arrows = {arrow for x, z, y in colliders for arrow in ((x, z), (y, z))}
+    def level_by_level(self) -> None:
+        p = self.data.n_variables
+        turn = sorted(range(p), key=lambda x: (round(self.strength[x].sum(), 6), x))
+        k = 1
+        while k <= self.most and self.adjacent.sum(axis=0).max(initial=0) > k:
+            near = [sorted(self.candidates(x), key=lambda y: (-self.strength[x, y], y)) for x in range(p)]
+            found = {}
+            for a, b in combinations(range(p), 2):
+                if self.adjacent[a, b] and not self.told[a, b]:
+                    first, second = sorted((a, b), key=turn.index)
+                    sets = [s for s in combinations(near[first], k) if second not in s]
+                    sets += [s for s in combinations(near[second], k) if first not in s]
+                    explanation = next((s for s in sets if self.separates(a, b, s)), None)
+                    if explanation is not None:
+                        found[a, b] = explanation
+            self.separators |= found
+            for a, b in found:
+                self.join(a, b, False)
+            k += 1
 
-    def priority(collider: tuple[int, int, int]) -> tuple[float, ...]:
-        x, z, y = collider
-        if (z, x) not in arrows and (z, y) not in arrows:
-            return (-1.0,)
-        statistic, df = test_of(x, y, (*separators.get((x, y), ()), z))
-        return (chi2.sf(statistic, df), -statistic)
+    def one_by_one(self) -> None:
+        p = self.data.n_variables
+        for k in range(1, min(self.most, p) + 1):
+            for x in range(p):
+                beginning, sets = np.flatnonzero(self.adjacent[x]).tolist(), self.candidates(x)
+                for given in combinations(sets, k):
+                    for y in [v for v in sets if v in beginning] + [v for v in beginning if v not in sets]:
+                        is_open = self.adjacent[x, y] and not self.told[x, y] and y not in given
+                        if is_open and self.adjacent[x, list(given)].all() and self.separates(x, y, given):
+                            self.separators[min(x, y), max(x, y)] = given
+                            self.join(x, y, False)
 
-    colliders.sort(key=priority)
-    arrow = adjacent.copy()
-    for x, z, y in colliders:
-        if arrow[x, z] and arrow[y, z]:
-            arrow[z, x] = arrow[z, y] = False
-    return Plain(adjacent, separators, colliders, arrow)
+    def verdict(self, x: int, z: int, y: int) -> str:
+        """Say whether z is a collider between x and y."""
+        if self.rule == "plain":
+            return "none" if z in self.separators.get((x, y), ()) else "collider"
+        sets = {
+            frozenset(s)
+            for v in (x, y)
+            for k in range(self.most + 1)
+            for s in combinations(self.candidates(v), k)
+        }
+        separating = [s for s in sets if self.separates(x, y, tuple(s))]
+        n_with = sum(z in s for s in separating)
+        if self.rule == "conservative":
+            unanimous = {0: "collider", len(separating): "none"} if separating else {}
+            return unanimous.get(n_with, "ambiguous")
+        return ["ambiguous", "none", "collider"][int(np.sign(2 * n_with - len(separating)))]
+
+    def run(self) -> Plain:
+        """Direct the skeleton."""
+        p = self.data.n_variables
+        verdicts = {
+            (x, z, y): self.verdict(x, z, y)
+            for z in range(p)
+            for x, y in combinations(np.flatnonzero(self.adjacent[z]).tolist(), 2)
+            if not self.adjacent[x, y]
+        }
+        colliders = [triple for triple, verdict in verdicts.items() if verdict == "collider"]
+        ambiguous = {triple for triple, verdict in verdicts.items() if verdict == "ambiguous"}
+        arrows = {arrow for x, z, y in colliders for arrow in ((x, z), (y, z))}
+
+        def priority(collider: tuple[int, int, int]) -> tuple[float, ...]:
+            x, z, y = collider
+            if (z, x) not in arrows and (z, y) not in arrows:
+                return (-1.0,)
+            statistic, df = self.test_of(x, y, (*self.separators.get((x, y), ()), z))
+            return (chi2.sf(statistic, df), -statistic)
+
+        arrow = self.adjacent & ~self.excluded
+        for x, z, y in sorted(colliders, key=priority):
+            if arrow[x, z] and arrow[y, z]:
+                arrow[z, x] = arrow[z, y] = False
+        meek_rules(arrow, np.sort([(x * p + z) * p + y for x, z, y in ambiguous]).astype(np.int64))
+        return Plain(self.adjacent, self.separators, set(colliders), ambiguous, arrow)
 
 
 def random_dataset(seed: int) -> Dataset:
@@ -138,6 +203,19 @@ def random_dataset(seed: int) -> Dataset:
     return data
 
 
+def true_knowledge(data: Dataset, seed: int) -> Knowledge:
+    """Tell some arcs along the order of the columns, exclude others, and put columns into two stages."""
+    rng = np.random.default_rng(seed)
+    pairs = list(combinations(data.names, 2))
+    told = [pairs[i] for i in rng.choice(len(pairs), 2, replace=False)]
+    gone = [pair for pair in pairs if pair not in told and rng.random() < 0.2]
+    back = [(y, x) for x, y in pairs if rng.random() < 0.2]
+    half = data.n_variables // 2
+    return Knowledge.of(
+        data.names, arcs=told, excluded=gone + back, stages=[data.names[:half], data.names[half:]]
+    )
+
+
 class TestAgainstPlain:
     """The compiled learner does what the stated rules say."""
 
@@ -149,19 +227,35 @@ class TestAgainstPlain:
             {"alpha": 0.3, "test": "g2"},
             {"alpha": 0.05, "test": "g2", "min_per_cell": 5.0},
             {"alpha": 0.05, "test": "g2", "max_conditioning": 1},
+            {"alpha": 0.1, "updates": "at-once"},
+            {"alpha": 0.1, "colliders": "conservative"},
+            {"alpha": 0.1, "colliders": "majority"},
+            {"alpha": 0.2, "colliders": "majority", "updates": "at-once", "max_conditioning": 2},
         ],
+        ids=str,
     )
-    def test_same_at_every_step(self, settings: dict[str, float | str | int]) -> None:
-        """Skeleton, separating sets, colliders in their order, and directions are the plain version's."""
-        n_separated = n_colliders = n_deep = 0
+    @pytest.mark.parametrize("is_told", [False, True], ids=["nothing told", "told"])
+    def test_same_at_every_step(self, settings: dict[str, float | str | int], is_told: bool) -> None:
+        """Skeleton, separating sets, colliders and directions are the plain version's."""
+        n_separated = n_colliders = n_deep = n_ambiguous = 0
         for seed in range(40):
             data = random_dataset(seed)
-            columns = prepare(data)
-            expected = plain_pc(data, **settings)
+            knowledge = true_knowledge(data, seed) if is_told else None
+            expected = PlainPc(data, **settings, knowledge=knowledge).run()
+            evidence = data_tests(data, alpha=settings["alpha"], test=settings.get("test", "g2"))
+            rest = {"knowledge": knowledge, "max_conditioning": settings.get("max_conditioning")}
+            n_per_cell = settings.get("min_per_cell", 0)
 
-            found = find_skeleton(columns, **settings)
-            colliders = find_colliders(columns, found, settings["test"])
-            graph = pc(data, **settings)
+            found = find_skeleton(
+                evidence,
+                max_cells=data.n_rows / n_per_cell if n_per_cell else np.inf,
+                at_once=settings.get("updates") == "at-once",
+                **rest,
+            )
+            colliders, ambiguous = find_colliders(
+                evidence, found, rule=settings.get("colliders", "plain"), **rest
+            )
+            graph = pc(data, **settings, knowledge=knowledge)
 
             p = data.n_variables
             apart = {
@@ -171,15 +265,17 @@ class TestAgainstPlain:
             }
             assert np.array_equal(expected.adjacent, found.adjacent)
             assert expected.separators == {pair: given for pair, given in apart.items() if given}
-            assert expected.colliders == [tuple(row) for row in colliders.tolist()]
-            meek_rules(expected.arrow)
+            assert expected.colliders == {tuple(row) for row in colliders.tolist()}
+            assert expected.ambiguous == {tuple(row) for row in ambiguous.tolist()}
             assert np.array_equal(expected.arrow, graph.arrow)
             n_separated += len(expected.separators)
             n_deep += sum(len(given) > 1 for given in expected.separators.values())
             n_colliders += len(colliders)
-        assert n_separated > 60
-        assert n_colliders > 20
-        assert (n_deep > 0) == ("max_conditioning" not in settings)
+            n_ambiguous += len(ambiguous)
+        assert n_separated > 40
+        assert n_colliders > 10
+        assert (n_deep > 0) == (settings.get("max_conditioning") != 1)
+        assert (n_ambiguous > 10) == (settings.get("colliders", "plain") != "plain")
 
 
 class TestOrder:
@@ -194,15 +290,16 @@ class TestOrder:
             view = View.draw(data.cardinalities.tolist(), rng)
             masked = view.mask(data)
 
-            plain = find_skeleton(prepare(data), alpha=0.05)
-            other = find_skeleton(prepare(masked), alpha=0.05)
+            evidence, masked_evidence = data_tests(data, alpha=0.05), data_tests(masked, alpha=0.05)
+            plain = find_skeleton(evidence)
+            other = find_skeleton(masked_evidence)
 
             assert np.array_equal(plain.adjacent[np.ix_(view.columns, view.columns)], other.adjacent)
             triples = [
                 {(z, frozenset((x, y))) for x, z, y in rows}
                 for rows in (
-                    find_colliders(prepare(data), plain, "g2").tolist(),
-                    view.columns[find_colliders(prepare(masked), other, "g2")].tolist(),
+                    find_colliders(evidence, plain)[0].tolist(),
+                    view.columns[find_colliders(masked_evidence, other)[0]].tolist(),
                 )
             ]
             assert triples[0] == triples[1]
@@ -419,7 +516,7 @@ class TestEdgeCases:
         graph = pc(data, max_conditioning=0)
 
         assert np.array_equal(
-            plain_pc(data, 0.01, "g2", max_conditioning=0).adjacent, graph.arrow | graph.arrow.T
+            PlainPc(data, alpha=0.01, max_conditioning=0).adjacent, graph.arrow | graph.arrow.T
         )
         assert graph.n_edges > pc(data).n_edges
 

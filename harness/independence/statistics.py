@@ -1,20 +1,6 @@
-"""Tests of (conditional) independence in contingency tables, plain and compiled.
+"""The statistics of a dataset, compiled.
 
-Both statistics compare the counts of each stratum, one joint state of the conditioning variables, with
-those expected under independence, E = row margin x column margin / stratum size:
-
-    G2 = 2 sum N log(N / E)        (Wilks 1938)
-    X2 = sum (N - E)^2 / E         (Pearson 1900)
-
-How sparse tables are read is a convention, and moves results; here, everywhere:
-
-- the degrees of freedom are nominal, (r_x - 1)(r_y - 1) times the product of the *declared* numbers of
-  states of the conditioning variables, whatever the rows show;
-- cells whose expectation is 0 contribute nothing, so a variable that shows one state only gives the
-  statistic 0 and the p-value 1;
-- a variable with one declared state has 0 degrees of freedom, and is independent of everything.
-
-The lower half of this file is for learners to compile into their loops. A loop compares the statistic
+The second half of this file is for learners to compile into their loops. A loop compares the statistic
 with a critical value and never computes a p-value. It need not count at all where the critical value is
 above the *ceiling* of the statistic, the greatest value that it can take given the two margins: G2 is at
 most 2 n times the smaller entropy, X2 at most n (r - 1) for the smaller number of seen states r. The
@@ -24,19 +10,15 @@ asked for; where they are, the rows are gone through instead, and nothing of the
 
 from __future__ import annotations
 
-import functools
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
-from typing import Any, ClassVar, Literal, NamedTuple
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import chdtrc, chdtri
 
 from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
-from generators.errors import InputError
 from harness.counts import (
     MAX_PLANE_CELLS,
     Columns,
@@ -51,8 +33,8 @@ from harness.counts import (
     tabulate_planes,
     workspace,
 )
-
-Test = Literal["g2", "pearson"]
+from harness.independence.critical import critical_values
+from harness.independence.tables import Statistic, is_pearson_statistic
 
 # Statistics come from sums whose rounding error is far below this, and it is far below any difference
 # that matters: at most this far above its critical value, a statistic counts as equal to it.
@@ -61,169 +43,7 @@ ROUNDING = 1e-6
 MAX_UNRANKED = 512  # measured: above it, empty cells cost more than leaving them out
 
 
-@dataclass(frozen=True, slots=True)
-class TestResult:
-    """The outcome of a test of independence.
-
-    Parameters
-    ----------
-    statistic : float
-    df : int
-        Nominal degrees of freedom.
-    p_value : float
-        Of the chi-square distribution with `df` degrees of freedom; 1 where `df` is 0.
-    """
-
-    __test__: ClassVar[bool] = False  # pytest: the name begins with "Test", but this is none
-
-    statistic: float
-    df: int
-    p_value: float
-
-
-def independence_test(table: NDArray[np.integer[Any]], *, test: Test = "g2") -> TestResult:
-    """Test whether two variables are independent given a third, or given several taken as one.
-
-    Parameters
-    ----------
-    table : int array, shape (q, r_x, r_y)
-        Counts; the first axis is over all declared joint states of the conditioning variables (q = 1
-        where there are none), the others over the declared states of the two variables.
-    test : {"g2", "pearson"}
-
-    Returns
-    -------
-    TestResult
-
-    Raises
-    ------
-    InputError
-        If the table has not three axes, no cell, a negative count, or the test is unknown.
-
-    Examples
-    --------
-    Admission (columns) by sex (rows) at Berkeley in 1973, six departments taken together (Bickel,
-    Hammel and O'Connell 1975):
-
-    >>> result = independence_test(np.array([[[1198, 1493], [557, 1278]]]))
-    >>> round(result.statistic, 4), result.df
-    (93.4494, 1)
-    """
-    counts = np.asarray(table)
-    if counts.ndim != 3 or counts.size == 0 or counts.dtype.kind not in "iu" or counts.min() < 0:
-        raise InputError(
-            f"a table must hold counts on three axes (strata, x, y), none empty, got {counts.dtype} of "
-            f"shape {counts.shape}"
-        )
-    is_pearson = _is_pearson(test)
-    seen = counts.astype(np.float64)
-    strata = seen.sum(axis=(1, 2), keepdims=True)
-    expected = seen.sum(axis=2, keepdims=True) * seen.sum(axis=1, keepdims=True) / np.maximum(strata, 1)
-    possible = expected > 0
-    seen, expected = seen[possible], expected[possible]
-    if is_pearson:
-        statistic = float(((seen - expected) ** 2 / expected).sum())
-    else:
-        statistic = 2 * float((seen * np.log(np.where(seen > 0, seen / expected, 1))).sum())
-    q, r_x, r_y = counts.shape
-    df = q * (r_x - 1) * (r_y - 1)
-    statistic = max(statistic, 0.0) if df else 0.0
-    return TestResult(statistic, df, float(chdtrc(df, statistic)) if df else 1.0)
-
-
-def _is_pearson(test: str) -> bool:
-    if test not in ("g2", "pearson"):
-        raise InputError(f"test must be one of g2, pearson, got {test!r}")
-    return test == "pearson"
-
-
-class CriticalValues(NamedTuple):
-    """Critical values by degrees of freedom, in a form that kernels can search.
-
-    Parameters
-    ----------
-    df : float64 array, shape (k,)
-        Ascending.
-    value : float64 array, shape (k,)
-    """
-
-    df: NDArray[np.float64]
-    value: NDArray[np.float64]
-
-
-def critical_values(alpha: float, df: NDArray[Any]) -> NDArray[np.float64]:
-    """Return the values that a statistic must exceed to be significant.
-
-    Parameters
-    ----------
-    alpha : float
-        Strictly between 0 and 1.
-    df : array of numbers
-        At least 0; where it is 0, no value is significant: infinity.
-
-    Returns
-    -------
-    float64 array, shape of `df`
-        Upper `alpha` quantiles of the chi-square distribution.
-
-    Examples
-    --------
-    >>> critical_values(0.05, np.array([0, 1, 6])).round(2).tolist()
-    [inf, 3.84, 12.59]
-    """
-    if not 0 < alpha < 1:
-        raise InputError(f"alpha must be strictly between 0 and 1, got {alpha}")
-    degrees = np.asarray(df, dtype=np.float64)
-    return np.where(degrees > 0, chdtri(np.maximum(degrees, 1), alpha), np.inf)
-
-
-def attainable_critical_values(
-    alpha: float, cardinalities: NDArray[np.int64], n_given: int, ceiling: float
-) -> CriticalValues:
-    """Return the critical values of all tests given `n_given` variables that can be significant.
-
-    Parameters
-    ----------
-    alpha : float
-        Strictly between 0 and 1.
-    cardinalities : int64 array, shape (p,)
-        Declared states of each variable.
-    n_given : int
-        How many variables are conditioned on.
-    ceiling : float
-        The greatest value of the statistic; critical values above it are left out, as far as they exceed
-        the next power of 2.
-
-    Returns
-    -------
-    CriticalValues
-        Exact, for all degrees of freedom that `cardinalities` allow.
-
-    Examples
-    --------
-    >>> attainable_critical_values(0.05, np.array([2, 3]), 1, 20.0).df.tolist()
-    [2.0, 3.0, 4.0, 6.0, 8.0, 12.0]
-    """
-    sizes = tuple(np.unique(cardinalities[cardinalities > 1]).tolist())
-    # Rounded up, so that datasets of about the same size share what is kept.
-    return _attainable(alpha, sizes, n_given, 2.0 ** math.ceil(math.log2(max(ceiling, 1.0))))
-
-
-@functools.lru_cache(maxsize=256)
-def _attainable(alpha: float, sizes: tuple[int, ...], n_given: int, ceiling: float) -> CriticalValues:
-    states = np.array(sizes, dtype=np.float64)
-    if n_given == 0:
-        df = np.unique(np.multiply.outer(states - 1, states - 1))
-    else:
-        df = np.unique(np.multiply.outer(_attainable(alpha, sizes, n_given - 1, ceiling).df, states))
-    value = critical_values(alpha, df)
-    attainable = CriticalValues(df[value < ceiling], value[value < ceiling])
-    for array in attainable:
-        array.flags.writeable = False
-    return attainable
-
-
-def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:
+def statistic_ceilings(columns: Columns, test: Statistic) -> NDArray[np.float64]:
     """Return the greatest statistic that each variable can take part in, given its margin.
 
     Parameters
@@ -244,10 +64,10 @@ def statistic_ceilings(columns: Columns, test: Test) -> NDArray[np.float64]:
     >>> statistic_ceilings(prepare(data), "pearson").tolist()
     [2.0, 0.0]
     """
-    return _ceilings(columns, _is_pearson(test))
+    return _ceilings(columns, is_pearson_statistic(test))
 
 
-def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
+def pair_statistics(columns: Columns, test: Statistic = "g2") -> NDArray[np.float64]:
     """Compute the statistic of every pair of variables, conditioned on nothing.
 
     Parameters
@@ -267,7 +87,7 @@ def pair_statistics(columns: Columns, test: Test = "g2") -> NDArray[np.float64]:
     >>> pair_statistics(prepare(data), "pearson").tolist()
     [[0.0, 10.0], [10.0, 0.0]]
     """
-    upper = _pair_statistics(columns, statistic_workspace(columns), _is_pearson(test))
+    upper = _pair_statistics(columns, statistic_workspace(columns), is_pearson_statistic(test))
     return upper + upper.T
 
 
@@ -304,7 +124,7 @@ def conditional_statistics(
     columns: Columns,
     pairs: Sequence[tuple[int, int]],
     given: Sequence[Sequence[int]],
-    test: Test = "g2",
+    test: Statistic = "g2",
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Compute the statistics of pairs of variables, each conditioned on others of its own.
 
@@ -336,7 +156,7 @@ def conditional_statistics(
     variables = np.array([v for own in given for v in own], dtype=np.int64)
     questions = np.array(pairs, dtype=np.int64).reshape(-1, 2)
     return _conditional_statistics(
-        columns, questions, ends, variables, statistic_workspace(columns), _is_pearson(test)
+        columns, questions, ends, variables, statistic_workspace(columns), is_pearson_statistic(test)
     )
 
 
@@ -373,19 +193,6 @@ def statistic_workspace(columns: Columns) -> StatisticWorkspace:
         x_log_x=counts * np.log(np.maximum(counts, 1)),
         margin=np.empty(int(columns.cardinalities.max(initial=1)), dtype=np.uint32),
     )
-
-
-@inlined
-def critical_value(critical: CriticalValues, df: float) -> float:
-    """Return the critical value at `df`, one of those listed; above the last one, infinity."""
-    low, high = 0, critical.df.shape[0]
-    while low < high:
-        middle = (low + high) // 2
-        if critical.df[middle] < df:
-            low = middle + 1
-        else:
-            high = middle
-    return float(critical.value[low]) if low < critical.df.shape[0] else np.inf
 
 
 @inlined
