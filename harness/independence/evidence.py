@@ -233,7 +233,7 @@ def _set_base(evidence: Any) -> Any:
     return of_data if _is(evidence, DataTests) else of_graph
 
 
-def is_dependent(evidence: Evidence, given: NDArray[np.int64], x: int, y: int, at_least: float = 0.0) -> bool:
+def is_dependent(evidence: Evidence, given: NDArray[np.int64], x: int, y: int, at_least: float) -> bool:
     """Say whether x and y are dependent given others.
 
     Parameters
@@ -243,14 +243,14 @@ def is_dependent(evidence: Evidence, given: NDArray[np.int64], x: int, y: int, a
     x, y : int
     at_least : float
         A lower bound of the statistic, from `find_lower_bounds`: where it is significant, nothing is
-        counted.
+        counted. 0 where none is known.
     """
     raise NotImplementedError("only kernels call this")
 
 
 @_compiled_for(is_dependent)
-def _is_dependent(evidence: Any, given: Any, x: Any, y: Any, at_least: Any = 0.0) -> Any:
-    def of_data(evidence: DataTests, given: NDArray[np.int64], x: int, y: int, at_least: float = 0.0) -> bool:
+def _is_dependent(evidence: Any, given: Any, x: Any, y: Any, at_least: Any) -> Any:
+    def of_data(evidence: DataTests, given: NDArray[np.int64], x: int, y: int, at_least: float) -> bool:
         sizes = evidence.cardinalities
         df = np.float64(sizes[x] - 1) * np.float64(sizes[y] - 1)
         for v in given:
@@ -271,9 +271,7 @@ def _is_dependent(evidence: Any, given: Any, x: Any, y: Any, at_least: Any = 0.0
         statistic = conditional_statistic(evidence.columns, given, x, y, evidence.work, is_pearson)
         return bool(statistic > limit + ROUNDING)
 
-    def of_graph(
-        evidence: Separations, given: NDArray[np.int64], x: int, y: int, at_least: float = 0.0
-    ) -> bool:
+    def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int, at_least: float) -> bool:
         sources = np.array([x], dtype=np.uint32)
         is_target = np.zeros(evidence.cardinalities.shape[0], dtype=np.bool_)
         is_target[y] = True
@@ -321,7 +319,7 @@ def _association(evidence: Any, given: Any, x: Any, y: Any) -> Any:
         return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
 
     def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int) -> float:
-        return 1.0 if is_dependent(evidence, given, x, y) else 0.0
+        return 1.0 if is_dependent(evidence, given, x, y, 0.0) else 0.0
 
     return of_data if _is(evidence, DataTests) else of_graph
 
@@ -369,6 +367,7 @@ def _find_lower_bounds(evidence: Any, given: Any, x: Any, others: Any, is_wanted
         bounds: NDArray[np.float64],
     ) -> None:
         evidence.work.parts[:] = 0
+        is_pearson = evidence.kind == PEARSON
         for i in range(others.shape[0]):
             bounds[i] = 0.0
             if evidence.kind == G2 and is_wanted[i]:
@@ -376,7 +375,7 @@ def _find_lower_bounds(evidence: Any, given: Any, x: Any, others: Any, is_wanted
                     bounds[i] = evidence.statistics[x, others[i]]
                 else:
                     bounds[i] = conditional_statistic(
-                        evidence.columns, given, x, others[i], evidence.work, False
+                        evidence.columns, given, x, others[i], evidence.work, is_pearson
                     )
         evidence.work.parts[:] = 0
 
@@ -401,7 +400,7 @@ def _marginally_dependent(evidence: Evidence) -> NDArray[np.bool_]:
     for x in range(p):
         set_base(evidence)
         for y in range(x + 1, p):
-            dependent[x, y] = dependent[y, x] = is_dependent(evidence, nothing, x, y)
+            dependent[x, y] = dependent[y, x] = is_dependent(evidence, nothing, x, y, 0.0)
     return dependent
 
 

@@ -229,7 +229,7 @@ def _try_sets(
                 given[j] = candidates[chosen[j]]
                 is_new |= done < may_explain.shape[0] and not may_explain[done, given[j]]
             set_base(evidence)
-            if is_new and not is_dependent(evidence, given, x, y):
+            if is_new and not is_dependent(evidence, given, x, y, 0.0):
                 n_separating += 1
                 for v in given:
                     times[v] += 1

@@ -105,10 +105,11 @@ def find_skeleton(
     ----------
     evidence : DataTests or Separations
     knowledge : Knowledge, optional
-        Arcs that are there are never tested, pairs that exclude each other are not adjacent. And no set
-        for x holds a variable whose arc into x is excluded: where x and y are not adjacent in a DAG, the
-        parents of one of them separate them (Pearl 1988), so variables that cannot be parents are not
-        needed.
+        Arcs that are there are never tested. No set for x holds a variable whose arc into x is excluded:
+        where x and y are not adjacent in a DAG, the parents of one of them separate them (Pearl 1988), so
+        variables that cannot be parents are not needed. Pairs that exclude each other's arc are not
+        adjacent, whatever the tests say; what separates them is sought all the same, since it says what
+        is a collider between them. Where nothing does, nothing is.
     max_conditioning : int, optional
         The greatest number of variables conditioned on; by default as many as there are neighbours.
     max_cells : float
@@ -130,7 +131,7 @@ def find_skeleton(
     if knowledge is not None:
         is_told = knowledge.arcs | knowledge.arcs.T
         may_explain = ~knowledge.excluded.T
-        adjacent = (adjacent & ~(knowledge.excluded & knowledge.excluded.T)) | is_told
+        adjacent |= is_told
     strength = np.zeros((p, p)) if at_once else np.round(evidence.statistics, DECIMALS)
     order = np.argsort(np.round(strength.sum(axis=1), DECIMALS), kind="stable")
     levels: list[tuple[NDArray[np.int64], NDArray[np.int64]]] = []
@@ -149,7 +150,23 @@ def find_skeleton(
         if not is_any_made:
             break
         levels.append((pairs, given))
+    if knowledge is not None:
+        levels += _part(adjacent, knowledge.excluded & knowledge.excluded.T)
     return Skeleton(adjacent, collect_separators(levels))
+
+
+def _part(
+    adjacent: NDArray[np.bool_], is_absent: NDArray[np.bool_]
+) -> list[tuple[NDArray[np.int64], NDArray[np.int64]]]:
+    # Takes pairs from `adjacent` that knowledge says are not, and lets their common neighbours stand for
+    # what separates them.
+    apart = np.argwhere(np.triu(adjacent & is_absent))
+    adjacent &= ~is_absent
+    common = [np.flatnonzero(adjacent[x] & adjacent[y]) for x, y in apart]
+    return [
+        (np.array([x * len(adjacent) + y]), between[np.newaxis])
+        for (x, y), between in zip(apart, common, strict=True)
+    ]
 
 
 def _untestable_pairs(cardinalities: NDArray[np.int64], max_cells: float) -> NDArray[np.bool_]:
@@ -225,7 +242,8 @@ def _separate(
                         is_wanted[i] = is_worth_it and (adjacent[x, neighbours[i]] or i > last)
                     find_lower_bounds(evidence, given[: n_given - 1], x, neighbours, is_wanted, bounds)
                 set_base(evidence)
-                is_given[given] = True
+                for v in given:
+                    is_given[v] = True
                 for i in range(m):
                     y = neighbours[i]
                     if not adjacent[x, y] or is_told[x, y] or is_given[y] or cells * sizes[y] > max_cells:
@@ -237,10 +255,12 @@ def _separate(
                         continue
                     adjacent[x, y] = adjacent[y, x] = False
                     pairs[n_separated] = min(x, y) * p + max(x, y)
-                    separating[n_separated] = given
+                    for j in range(n_given):
+                        separating[n_separated, j] = given[j]
                     n_separated += 1
                     n_left -= 1
-                is_given[given] = False
+                for v in given:
+                    is_given[v] = False
             changed = next_combination(chosen, n_taken - 1, n_candidates)
             is_new_base = changed < n_given - 1 or (is_new_base and not is_testable)
     return pairs[:n_separated].copy(), separating[:n_separated].copy(), is_any_made

@@ -88,10 +88,15 @@ class PlainPc:
             self.strength[x, y] = self.strength[y, x] = self.test_of(x, y, ())[0]
         self.adjacent = np.zeros((p, p), dtype=bool)
         for x, y in combinations(range(p), 2):
-            is_gone = self.excluded[x, y] and self.excluded[y, x]
-            self.join(x, y, self.told[x, y] or (not is_gone and not self.separates(x, y, ())))
+            self.join(x, y, self.told[x, y] or not self.separates(x, y, ()))
         self.separators: dict[tuple[int, int], tuple[int, ...]] = {}
         (self.level_by_level if updates == "after-level" else self.one_by_one)()
+        absent = [pair for pair in combinations(range(p), 2) if self.excluded[pair] & self.excluded.T[pair]]
+        inseparable = [pair for pair in absent if self.adjacent[pair]]
+        for x, y in inseparable:
+            self.join(x, y, False)
+        for x, y in inseparable:
+            self.separators[x, y] = tuple(np.flatnonzero(self.adjacent[x] & self.adjacent[y]).tolist())
 
     def join(self, x: int, y: int, is_adjacent: bool) -> None:
         self.adjacent[x, y] = self.adjacent[y, x] = is_adjacent
@@ -264,7 +269,9 @@ class TestAgainstPlain:
                 if not found.adjacent[x, y]
             }
             assert np.array_equal(expected.adjacent, found.adjacent)
-            assert expected.separators == {pair: given for pair, given in apart.items() if given}
+            assert {pair: given for pair, given in expected.separators.items() if given} == {
+                pair: given for pair, given in apart.items() if given
+            }
             assert expected.colliders == {tuple(row) for row in colliders.tolist()}
             assert expected.ambiguous == {tuple(row) for row in ambiguous.tolist()}
             assert np.array_equal(expected.arrow, graph.arrow)
