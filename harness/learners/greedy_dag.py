@@ -150,8 +150,11 @@ def hill_climbing(
             f"hill-climbing would need about {needed:,.0f} MB here; it takes at most {MAX_MEGABYTES}"
         )
     p = data.n_variables
-    known = Knowledge.of(data.names) if knowledge is None else knowledge
-    if known.names != data.names:
+    if knowledge is None:
+        permitted, required = np.ones((p, p), dtype=np.bool_), np.zeros((p, p), dtype=np.bool_)
+    elif knowledge.names == data.names:
+        permitted, required = ~knowledge.excluded, knowledge.arcs
+    else:
         raise InputError("knowledge: is over other variables than the data, or in another order")
 
     def random_starts() -> Iterable[Arrow]:
@@ -159,23 +162,24 @@ def hill_climbing(
         for _ in range(restarts):
             mean_parents = min(START_MEAN_PARENTS, (p - 1) / 2)
             drawn = draw_along_random_order(p, mean_parents=mean_parents, max_parents=cap, rng=rng)
-            yield drawn if knowledge is None else _in_accord(drawn, known, max_parents)
+            yield drawn if knowledge is None else _admit(drawn & permitted, required, max_parents)
 
     arrow = climb(
         prepare(data),
         score=score,
         ess=ess,
         max_parents=max_parents,
-        permitted=~known.excluded,
-        required=known.arcs,
+        permitted=permitted,
+        required=required,
         starts=random_starts(),
     )
     return Graph(data.names, arrow)
 
 
-def _in_accord(drawn: Arrow, known: Knowledge, max_parents: int) -> Arrow:
-    arrow = known.arcs.copy()
-    for x, y in np.argwhere(drawn & ~known.excluded).tolist():
+def _admit(drawn: Arrow, required: Arrow, max_parents: int) -> Arrow:
+    # The required arcs and, one by one, each drawn one that goes with those before it.
+    arrow = required.copy()
+    for x, y in np.argwhere(drawn).tolist():
         if arrow[:, y].sum() < max_parents and not _leads(arrow, y, x):
             arrow[x, y] = True
     return arrow
@@ -335,9 +339,10 @@ class Search(NamedTuple):
 def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
     p = len(permitted)
     into = np.ascontiguousarray((permitted | required).T)
-    np.fill_diagonal(into, False)
-    first = np.concatenate([[0], np.cumsum(np.count_nonzero(into, axis=1))]).astype(np.int64)
-    sources = np.broadcast_to(np.arange(p, dtype=np.uint32), (p, p))[into]
+    into.flat[:: p + 1] = False
+    first = np.zeros(p + 1, dtype=np.int64)
+    np.cumsum(into.sum(axis=1), out=first[1:])
+    sources = np.nonzero(into)[1].astype(np.uint32)
     return Search(
         first,
         sources,
@@ -476,21 +481,18 @@ def _find_best_addition(state: Search, y: int) -> None:
 
 @inlined
 def _find_best_changes(state: Search, y: int) -> None:
-    # After the gains of y's column changed: for y, and for the children that y could become a child of.
-    _find_best_change(state, y)
-    for a in range(state.first[y], state.first[y + 1]):
-        _find_best_change(state, np.int64(state.sources[a]))
-
-
-@inlined
-def _find_best_change(state: Search, y: int) -> None:
-    best = -np.inf
-    for j in range(state.n_parents[y]):
-        loss, place = state.losses[y, j], state.reverse[y, j]
-        best = max(best, loss)
-        if place >= 0:
-            best = max(best, loss + state.gains[place])
-    state.best_change[y] = best
+    # After y's gains changed: for y, and for its children that could become its parents.
+    sources, gains, n_parents = state.sources, state.gains, state.n_parents
+    reverse, losses, best_change = state.reverse, state.losses, state.best_change
+    first, end = state.first[y], state.first[y + 1]
+    for a in range(first - 1, end):
+        v = y if a < first else np.int64(sources[a])
+        best = -np.inf
+        for j in range(n_parents[v]):
+            best = max(best, losses[v, j])
+            if reverse[v, j] >= 0:
+                best = max(best, losses[v, j] + gains[reverse[v, j]])
+        best_change[v] = best
 
 
 @inlined
@@ -510,17 +512,17 @@ def _may_reverse(state: Search, y: int, j: int) -> bool:
 
 
 @inlined
-def _place(state: Search, x: int, y: int) -> int:
+def _place(first: NDArray[np.int64], sources: NDArray[np.uint32], x: int, y: int) -> int:
     # Of the arc x -> y; -1 if it is not permitted.
-    low, high = state.first[y], state.first[y + 1]
+    low, high = first[y], first[y + 1]
     end = high
     while low < high:
         middle = (low + high) // 2
-        if state.sources[middle] < x:
+        if sources[middle] < x:
             low = middle + 1
         else:
             high = middle
-    return low if low < end and state.sources[low] == x else np.int64(-1)
+    return low if low < end and sources[low] == x else np.int64(-1)
 
 
 @inlined
@@ -532,7 +534,7 @@ def _insert_parent(state: Search, x: int, y: int) -> None:
         reverse[j] = reverse[j - 1]
         j -= 1
     parents[j] = x
-    reverse[j] = _place(state, y, x)
+    reverse[j] = _place(state.first, state.sources, y, x)
     state.n_parents[y] += 1
 
 
@@ -609,26 +611,24 @@ def _score_changes(
     columns: Columns, rule: Scoring, is_equivalent: bool, y: int, state: Search, space: Workspace
 ) -> None:
     # Scores y's family and the gain of every change to it.
-    k = state.n_parents[y]
-    start, end = state.first[y], state.first[y + 1]
-    parents, sources, gains = state.parents[y, :k], state.sources[start:end], state.gains[start:end]
-    for a in range(gains.shape[0]):  # what stays NaN is scored
-        gains[a] = state.alone[start + a] if k == 0 else np.nan
-    if k == state.parents.shape[1]:
-        for a in range(gains.shape[0]):
-            gains[a] = -np.inf
+    first, sources, alone, gains = state.first, state.sources, state.alone, state.gains
+    start, end, k = first[y], first[y + 1], state.n_parents[y]
+    parents = state.parents[y, :k]
+    has_room = k < state.parents.shape[1]
+    for a in range(start, end):
+        gains[a] = alone[a] if k == 0 else np.nan if has_room else -np.inf
     for j in range(k):
-        state.gains[_place(state, parents[j], y)] = -np.inf
-    own = _score_additions(columns, rule, parents, y, sources, gains, space)
+        gains[_place(first, sources, parents[j], y)] = -np.inf
+    own = _score_additions(columns, rule, parents, y, sources[start:end], gains[start:end], space)
     state.scores[y] = own
     if k == 0:
-        for a in range(gains.shape[0]):
-            if np.isnan(state.alone[start + a]):
-                state.alone[start + a] = gains[a]
+        for a in range(start, end):
+            if np.isnan(alone[a]):
+                alone[a] = gains[a]
                 # Score-equivalent scores gain the same from x -> y as from y -> x.
-                place = _place(state, y, np.int64(sources[a])) if is_equivalent else np.int64(-1)
+                place = _place(first, sources, y, np.int64(sources[a])) if is_equivalent else np.int64(-1)
                 if place >= 0:
-                    state.alone[place] = gains[a]
+                    alone[place] = gains[a]
     for j in range(k):
         if state.required[parents[j], y]:
             state.losses[y, j] = -np.inf
