@@ -1,7 +1,8 @@
 """Greedy search over DAGs by a decomposable score: hill climbing with a cache of gains.
 
 A move adds an arc, deletes one or reverses one, and keeps the graph acyclic and every variable at
-`max_parents` parents or fewer. The search makes the move that gains most until none gains.
+`max_parents` parents or fewer. The search makes the move that gains most until none gains. Only permitted
+arcs are ever added, or made by a reversal; required arcs are there from the start and stay.
 
 *Ties.* Score-equivalent moves gain exactly the same in theory and differ by rounding in practice, so
 without a rule two correct programs end in different graphs. Here, of all legal moves that gain within
@@ -9,14 +10,16 @@ without a rule two correct programs end in different graphs. Here, of all legal 
 is there, deleting it comes before reversing it. A move that gains no more than that width is not made.
 
 *Speed.* The gains of all changes to a variable's parents are kept, and computed anew only for the one or
-two variables whose parents changed: all tables of such a column share one base (`harness.counts`). Each
-column's best legal addition is kept too. Adding an arc only ever makes additions illegal, so a kept best
-that is still legal is still best; after other moves the columns whose descendants changed are searched
-again.
+two variables whose parents changed: all tables of such a column share one base (`harness.counts`). Of each
+column the best legal addition is kept too, and the best deletion or reversal, legal or not. Adding an arc
+only ever makes additions illegal, so a kept best that is still legal is still best; after other moves the
+columns whose descendants changed are searched again. What is kept of a column are its permitted arcs only.
 """
 
 from __future__ import annotations
 
+import itertools
+from collections.abc import Iterable
 from typing import Annotated, NamedTuple
 
 import numpy as np
@@ -24,6 +27,7 @@ from numpy.typing import NDArray
 
 from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
+from generators.errors import InputError
 from generators.graph import Graph
 from generators.settings import Between
 from generators.topologies.random_order import draw_along_random_order
@@ -53,8 +57,11 @@ from harness.family_scores import (
     sum_rises,
     sum_terms,
 )
+from harness.knowledge import Knowledge
 from harness.learners.specification import learner
 from harness.records import Declined
+
+Arrow = NDArray[np.bool_]
 
 MAX_MEGABYTES = 1024
 START_MEAN_PARENTS = 1.0
@@ -75,6 +82,7 @@ def hill_climbing(
     ess: Annotated[float, Between(0, inside=True)] = 1.0,
     max_parents: Annotated[int, Between(1)] = 4,
     restarts: Annotated[int, Between(0)] = 0,
+    knowledge: Knowledge | None = None,
     rng: np.random.Generator,
 ) -> Graph:
     """Add, delete or reverse the arc that improves a score most, until none does.
@@ -84,6 +92,12 @@ def hill_climbing(
     which makes one parent per variable on average, and a variable that got more than `max_parents` keeps
     that many of them, chosen at random. The graph with the greatest score of all searches is returned, the
     earliest among equals.
+
+    With knowledge, arcs that are known to be there are in every graph of every search, and excluded ones
+    in none. The first search starts from the known arcs alone. Each restart starts from them and those
+    arcs of the random DAG that go with them: taken in order of x, then y, for x -> y, an arc is left out
+    if it is excluded, if it would close a directed cycle with the arcs so far, or if y has `max_parents`
+    parents already.
 
     Parameters
     ----------
@@ -97,6 +111,8 @@ def hill_climbing(
         The greatest number of parents of a variable; at least 1.
     restarts : int
         The number of searches from random starts after the first.
+    knowledge : Knowledge, optional
+        Over the data's variables, in their order.
     rng : numpy.random.Generator
         Draws the random starts; without restarts nothing is drawn.
 
@@ -104,12 +120,14 @@ def hill_climbing(
     -------
     Graph
         A DAG that no single move improves. Its directions within a Markov equivalence class are
-        arbitrary.
+        arbitrary, but for those that knowledge decides.
 
     Raises
     ------
     Declined
-        If the search would need more than 1 GiB.
+        If the search would need more than 1 GiB, or a variable has more known parents than `max_parents`.
+    InputError
+        If the knowledge is over other variables.
 
     Notes
     -----
@@ -123,31 +141,127 @@ def hill_climbing(
     >>> data = Dataset(("a", "b"), (("0", "1"),) * 2, np.stack([a, b], axis=1).astype(np.uint8))
     >>> hill_climbing(data, rng=rng).edges()
     (('a', 'b', 'directed'),)
+    >>> hill_climbing(data, knowledge=Knowledge.of("ab", excluded=[("a", "b")]), rng=rng).edges()
+    (('b', 'a', 'directed'),)
     """
-    needed = megabytes(data)
+    needed = megabytes(data, restarts)
     if needed > MAX_MEGABYTES:
         raise Declined(
             f"hill-climbing would need about {needed:,.0f} MB here; it takes at most {MAX_MEGABYTES}"
         )
     p = data.n_variables
-    columns = prepare(data)
-    rule, space = scoring(columns, score, ess), workspace(columns)
-    width = tie_width(data.n_rows)
-    cap = max(1, min(max_parents, p - 1))
+    if knowledge is None:
+        permitted, required = np.ones((p, p), dtype=np.bool_), np.zeros((p, p), dtype=np.bool_)
+    elif knowledge.names == data.names:
+        permitted, required = ~knowledge.excluded, knowledge.arcs
+    else:
+        raise InputError("knowledge: is over other variables than the data, or in another order")
 
-    alone = np.empty((p, p))
-    best, best_score = np.zeros((p, p), dtype=np.bool_), -np.inf
-    for search in range(restarts + 1):
-        start = np.zeros((p, p), dtype=np.bool_)
-        if search > 0:
+    def random_starts() -> Iterable[Arrow]:
+        cap = max(1, min(max_parents, p - 1))
+        for _ in range(restarts):
             mean_parents = min(START_MEAN_PARENTS, (p - 1) / 2)
-            start = draw_along_random_order(p, mean_parents=mean_parents, max_parents=cap, rng=rng)
-        found, reached = _climb(
-            columns, rule, score in SCORE_EQUIVALENT, cap, width, start, search == 0, alone, space
-        )
+            drawn = draw_along_random_order(p, mean_parents=mean_parents, max_parents=cap, rng=rng)
+            yield drawn if knowledge is None else _admit(drawn & permitted, required, max_parents)
+
+    arrow = climb(
+        prepare(data),
+        score=score,
+        ess=ess,
+        max_parents=max_parents,
+        permitted=permitted,
+        required=required,
+        starts=random_starts(),
+    )
+    return Graph(data.names, arrow)
+
+
+def _admit(drawn: Arrow, required: Arrow, max_parents: int) -> Arrow:
+    # The required arcs and, one by one, each drawn one that goes with those before it.
+    arrow = required.copy()
+    for x, y in np.argwhere(drawn).tolist():
+        if arrow[:, y].sum() < max_parents and not _leads(arrow, y, x):
+            arrow[x, y] = True
+    return arrow
+
+
+def _leads(arrow: Arrow, start: int, end: int) -> bool:
+    reached = {start}
+    stack = [start]
+    while stack:
+        for v in np.flatnonzero(arrow[stack.pop()]).tolist():
+            if v not in reached:
+                reached.add(v)
+                stack.append(v)
+    return end in reached
+
+
+def climb(
+    columns: Columns,
+    *,
+    score: Score,
+    ess: float,
+    max_parents: int,
+    permitted: Arrow,
+    required: Arrow,
+    starts: Iterable[Arrow] = (),
+) -> Arrow:
+    """Search greedily among the DAGs that have all required arcs and no arc that is not permitted.
+
+    Takes time and memory for the permitted arcs; others are never scored.
+
+    Parameters
+    ----------
+    columns : Columns
+    score : {"bic", "aic", "bdeu", "k2"}
+    ess : float
+        Equivalent sample size of BDeu; above 0.
+    max_parents : int
+        The greatest number of parents of a variable; at least 1.
+    permitted : bool array, shape (p, p)
+        ``[x, y]``: x -> y may be there. The diagonal is not read.
+    required : bool array, shape (p, p)
+        ``[x, y]``: x -> y is there. Acyclic. What is required is permitted.
+    starts : iterable of bool arrays, shape (p, p)
+        The first search starts from the required arcs, and one more from each of these DAGs, which have
+        all required arcs, permitted ones only, and at most `max_parents` parents.
+
+    Returns
+    -------
+    bool array, shape (p, p)
+        ``[x, y]``: x -> y. Of all searches' graphs the one with the greatest score, the earliest among
+        equals.
+
+    Raises
+    ------
+    Declined
+        If more arcs into a variable are required than it may have parents.
+
+    Examples
+    --------
+    >>> codes = np.array([[0, 0, 1], [1, 1, 1]] * 50, dtype=np.uint8)
+    >>> columns = prepare(Dataset(tuple("abc"), (("0", "1"),) * 3, codes))
+    >>> permitted, required = np.ones((3, 3), dtype=bool), np.zeros((3, 3), dtype=bool)
+    >>> permitted[0, 1] = False
+    >>> np.argwhere(
+    ...     climb(columns, score="bic", ess=1.0, max_parents=2, permitted=permitted, required=required)
+    ... ).tolist()
+    [[1, 0]]
+    """
+    p, n = columns.codes.shape
+    most = int(required.sum(axis=0).max(initial=0))
+    if most > max_parents:
+        raise Declined(f"{most} parents of one variable are known; at most {max_parents} are allowed")
+    rule, space = scoring(columns, score, ess), workspace(columns)
+    width = tie_width(n)
+    state = _search(permitted, required, max(1, min(max_parents, p - 1)))
+    best, best_score = required, -np.inf
+    for start in itertools.chain([required], starts):
+        found = np.array(start, order="C")
+        reached = _climb(columns, rule, score in SCORE_EQUIVALENT, width, state, space, found)
         if reached > best_score + width:
             best, best_score = found, reached
-    return Graph(data.names, best)
+    return best
 
 
 def tie_width(n: int) -> float:
@@ -159,51 +273,92 @@ def tie_width(n: int) -> float:
     return 1e-7 * max(1.0, n / 1e5)
 
 
-def megabytes(data: Dataset) -> float:
-    """Return what a search takes at most, in units of 2^20 bytes.
+def megabytes(data: Dataset, restarts: int = 0) -> float:
+    """Return what a search without knowledge takes at most, in units of 2^20 bytes.
 
-    The gains are two arrays of p x p numbers of 8 bytes, beside p x p bytes and bits; the planes take one
-    bit per row and state, scratch arrays about 70 bytes a row.
+    For each arc two gains of 8 bytes and a source of 4, beside p x p bytes and bits; drawing a random start
+    takes about 5 bytes more. The planes take one bit per row and state, scratch arrays about 70 bytes a row.
     """
     p, n = data.n_variables, data.n_rows
-    return (18 * p * p + n * (int(data.cardinalities.sum()) / 8 + 70)) / 2**20
+    per_pair = 30 if restarts > 0 else 25
+    return (per_pair * p * p + n * (int(data.cardinalities.sum()) / 8 + 70)) / 2**20
 
 
 class Search(NamedTuple):
-    """The state of one search.
+    """The state of one search. An arc has one *place* in the arrays that have one value per permitted arc.
 
     Parameters
     ----------
-    is_parent : bool array, shape (p, p)
-        ``[y, x]``: x is a parent of y.
+    first : int64 array, shape (p + 1,)
+        The permitted arcs into y have the places ``first[y]`` to ``first[y + 1] - 1``.
+    sources : uint32 array, shape (permitted arcs,)
+        Where each arc comes from; ascending for each y.
+    required : bool array, shape (p, p)
+        ``[x, y]``: the arc x -> y stays.
+    alone : float64 array, shape (permitted arcs,)
+        The gain of adding each arc while its target has no parents; NaN where not yet computed.
+    gains : float64 array, shape (permitted arcs,)
+        The gain of adding each arc, legal or not; minus infinity where it is there already and where its
+        target has no room.
     parents : int64 array, shape (p, max_parents)
         The first ``n_parents[y]`` of row y are the parents of y, ascending.
     n_parents : int64 array, shape (p,)
+    reverse : int64 array, shape (p, max_parents)
+        The places of the arcs from y to its parents; -1 where the arc is not permitted.
+    losses : float64 array, shape (p, max_parents)
+        The gain of deleting each parent of y; minus infinity where its arc is required.
     scores : float64 array, shape (p,)
         Of each family.
-    gains : float64 array, shape (p, p)
-        ``[y, x]``: the change of y's score if x were taken out of its parents or, where it is none, put
-        in, legal or not; minus infinity where y has no room.
-    alone : float64 array, shape (p, p)
-        The gains while no variable has parents; on the diagonal the scores.
-    best_gain : float64 array, shape (p,)
+    best_addition : float64 array, shape (p,)
         The gain of the best addition to y's parents that was legal when it was found; minus infinity if
         none was.
     best_source : int64 array, shape (p,)
         The variable that it adds.
+    best_change : float64 array, shape (p,)
+        The gain of the best deletion or reversal of an arc into y, legal or not.
     reaches : uint64 array, shape (p, ceil(p / 64))
         Bit x of row y: a directed path leads from y to x.
     """
 
-    is_parent: NDArray[np.bool_]
+    first: NDArray[np.int64]
+    sources: NDArray[np.uint32]
+    required: Arrow
+    alone: NDArray[np.float64]
+    gains: NDArray[np.float64]
     parents: NDArray[np.int64]
     n_parents: NDArray[np.int64]
+    reverse: NDArray[np.int64]
+    losses: NDArray[np.float64]
     scores: NDArray[np.float64]
-    gains: NDArray[np.float64]
-    alone: NDArray[np.float64]
-    best_gain: NDArray[np.float64]
+    best_addition: NDArray[np.float64]
     best_source: NDArray[np.int64]
+    best_change: NDArray[np.float64]
     reaches: NDArray[np.uint64]
+
+
+def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
+    p = len(permitted)
+    into = np.ascontiguousarray((permitted | required).T)
+    into.flat[:: p + 1] = False
+    first = np.zeros(p + 1, dtype=np.int64)
+    np.cumsum(into.sum(axis=1), out=first[1:])
+    sources = np.nonzero(into)[1].astype(np.uint32)
+    return Search(
+        first,
+        sources,
+        np.array(required, order="C"),
+        np.full(len(sources), np.nan),
+        np.empty(len(sources)),
+        np.empty((p, max_parents), dtype=np.int64),
+        np.empty(p, dtype=np.int64),
+        np.empty((p, max_parents), dtype=np.int64),
+        np.empty((p, max_parents)),
+        np.empty(p),
+        np.empty(p),
+        np.empty(p, dtype=np.int64),
+        np.empty(p),
+        np.empty((p, -(-p // WORD_ROWS)), dtype=np.uint64),
+    )
 
 
 @kernel
@@ -211,102 +366,101 @@ def _climb(
     columns: Columns,
     rule: Scoring,
     is_equivalent: bool,
-    max_parents: int,
     width: float,
-    start: NDArray[np.bool_],
-    is_first: bool,
-    alone: NDArray[np.float64],
+    state: Search,
     space: Workspace,
-) -> tuple[NDArray[np.bool_], float]:
-    # One search from the DAG `start`, [x, y] for x -> y. Returns the DAG that it ends in, and its score.
-    # The first search fills `alone` (see `Search`), the others use it.
-    p = start.shape[0]
-    if is_first:
-        nothing = np.empty(0, dtype=np.int64)
-        is_parent = np.zeros(p, dtype=np.bool_)
-        for y in range(p):
-            # Score-equivalent scores gain the same from x -> y as from y -> x.
-            first = y + 1 if is_equivalent else np.int64(0)
-            alone[y, y] = _score_additions(columns, rule, nothing, y, is_parent, first, alone[y], space)
-            if is_equivalent:
-                for x in range(first, p):
-                    alone[x, y] = alone[y, x]
-    state = Search(
-        np.zeros((p, p), dtype=np.bool_),
-        np.empty((p, max_parents), dtype=np.int64),
-        np.zeros(p, dtype=np.int64),
-        np.empty(p),
-        np.empty((p, p)),
-        alone,
-        np.empty(p),
-        np.zeros(p, dtype=np.int64),
-        np.zeros((p, (p + WORD_ROWS - 1) // WORD_ROWS), dtype=np.uint64),
-    )
+    arrow: Arrow,
+) -> float:
+    # One search from the DAG `arrow`, [x, y] for x -> y, which is overwritten by the one that it ends in.
+    # Returns that one's score.
+    p = arrow.shape[0]
+    changed = np.empty(p, dtype=np.int64)
+    before = np.empty(state.reaches.shape, dtype=np.uint64)
     for y in range(p):
-        for x in range(p):
-            if start[x, y]:
+        changed[y] = y
+        state.n_parents[y] = 0
+        for a in range(state.first[y], state.first[y + 1]):
+            x = np.int64(state.sources[a])
+            if arrow[x, y]:
                 _insert_parent(state, x, y)
-    _trace_paths(state)
-    for y in range(p):
-        _score_changes(columns, rule, y, state, space)
-        _find_best_addition(state, y)
+                arrow[x, y] = False
+    _trace_paths(state, before)
+    n_changed, move = p, NONE
     while True:
-        move, x, y = _choose_move(width, max_parents, state)
+        for i in range(n_changed):
+            _score_changes(columns, rule, is_equivalent, changed[i], state, space)
+            _find_best_addition(state, changed[i])
+        for i in range(n_changed):
+            _find_best_changes(state, changed[i])
+        move, x, y = _choose_move(width, state)
         if move == NONE:
-            return state.is_parent.T.copy(), state.scores.sum()
+            break
+        changed[0], changed[1] = y, x
+        n_changed = 2 if move == REVERSE else 1
         if move == ADD:
             _insert_parent(state, x, y)
             _extend_paths(state, x, y)
-            _score_changes(columns, rule, y, state, space)
-            _find_best_addition(state, y)
             continue
         _remove_parent(state, x, y)
-        _score_changes(columns, rule, y, state, space)
         if move == REVERSE:
             _insert_parent(state, y, x)
-            _score_changes(columns, rule, x, state, space)
-        before = state.reaches.copy()
-        _trace_paths(state)
+        _trace_paths(state, before)
         for v in range(p):
-            if v in (x, y) or (before[v] != state.reaches[v]).any():
+            differs = False
+            for w in range(before.shape[1]):
+                differs |= before[v, w] != state.reaches[v, w]
+            if differs:
                 _find_best_addition(state, v)
+    total = 0.0
+    for y in range(p):
+        total += state.scores[y]
+        for j in range(state.n_parents[y]):
+            arrow[state.parents[y, j], y] = True
+    return total
 
 
 @inlined
-def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, int, int]:
+def _choose_move(width: float, state: Search) -> tuple[int, int, int]:
     # The move, and the arc x -> y that it adds, deletes or reverses.
-    gains, parents, n_parents = state.gains, state.parents, state.n_parents
-    is_parent, best_gain, reaches = state.is_parent, state.best_gain, state.reaches
-    p = gains.shape[0]
+    gains, n_parents, reverse, losses = state.gains, state.n_parents, state.reverse, state.losses
+    best_addition, best_change = state.best_addition, state.best_change
+    p = n_parents.shape[0]
     greatest = -np.inf
     for y in range(p):
-        for x in parents[y, : n_parents[y]]:
-            greatest = max(greatest, gains[y, x])
-            gain = gains[y, x] + gains[x, y]
-            if gain > greatest and _may_reverse(state, x, y, max_parents):
-                greatest = gain
+        if best_change[y] > greatest:
+            for j in range(n_parents[y]):
+                greatest = max(greatest, losses[y, j])
+                if reverse[y, j] >= 0:
+                    gain = losses[y, j] + gains[reverse[y, j]]
+                    if gain > greatest and _may_reverse(state, y, j):
+                        greatest = gain
     for y in range(p):
-        if best_gain[y] >= greatest - width:
-            if _has_bit(reaches[y], state.best_source[y]):
+        if best_addition[y] >= greatest - width:
+            if _has_bit(state.reaches[y], state.best_source[y]):
                 _find_best_addition(state, y)
-            greatest = max(greatest, best_gain[y])
+            greatest = max(greatest, best_addition[y])
     if not greatest > width:
         return NONE, -1, -1
 
     enough = max(greatest - width, width)
     move, first_x, first_y = NONE, p, p
     for y in range(p):
-        for x in parents[y, : n_parents[y]]:
-            if (x, y) < (first_x, first_y):
-                gain = gains[y, x] + gains[x, y]
-                if gains[y, x] >= enough:
-                    move, first_x, first_y = DELETE, x, y
-                elif gain >= enough and _may_reverse(state, x, y, max_parents):
-                    move, first_x, first_y = REVERSE, x, y
-        if best_gain[y] >= enough:
-            for x in range(min(p, first_x + 1)):
-                is_legal = not is_parent[y, x] and not _has_bit(reaches[y], x)
-                if gains[y, x] >= enough and is_legal and (x, y) < (first_x, first_y):
+        if best_change[y] >= enough:
+            for j in range(n_parents[y]):
+                x = state.parents[y, j]
+                if x < first_x:  # y ascends, so that an earlier y stays
+                    if losses[y, j] >= enough:
+                        move, first_x, first_y = DELETE, x, y
+                    elif reverse[y, j] >= 0:
+                        gain = losses[y, j] + gains[reverse[y, j]]
+                        if gain >= enough and _may_reverse(state, y, j):
+                            move, first_x, first_y = REVERSE, x, y
+        if best_addition[y] >= enough:
+            for a in range(state.first[y], state.first[y + 1]):
+                x = np.int64(state.sources[a])
+                if x >= first_x:
+                    break
+                if gains[a] >= enough and not _has_bit(state.reaches[y], x):
                     move, first_x, first_y = ADD, x, y
                     break
     return move, first_x, first_y
@@ -314,14 +468,31 @@ def _choose_move(width: float, max_parents: int, state: Search) -> tuple[int, in
 
 @inlined
 def _find_best_addition(state: Search, y: int) -> None:
-    gains = state.gains[y]
-    best, source = -np.inf, 0
-    is_parent, reached = state.is_parent[y], state.reaches[y]
-    for x in range(gains.shape[0]):
-        if gains[x] > best and not is_parent[x] and not _has_bit(reached, x):
-            best, source = gains[x], x
-    state.best_gain[y] = best
+    start = state.first[y]
+    sources, gains = state.sources[start : state.first[y + 1]], state.gains[start : state.first[y + 1]]
+    best, source = -np.inf, np.int64(0)
+    reached = state.reaches[y]
+    for a in range(gains.shape[0]):
+        if gains[a] > best and not _has_bit(reached, sources[a]):
+            best, source = gains[a], np.int64(sources[a])
+    state.best_addition[y] = best
     state.best_source[y] = source
+
+
+@inlined
+def _find_best_changes(state: Search, y: int) -> None:
+    # After y's gains changed: for y, and for its children that could become its parents.
+    sources, gains, n_parents = state.sources, state.gains, state.n_parents
+    reverse, losses, best_change = state.reverse, state.losses, state.best_change
+    first, end = state.first[y], state.first[y + 1]
+    for a in range(first - 1, end):
+        v = y if a < first else np.int64(sources[a])
+        best = -np.inf
+        for j in range(n_parents[v]):
+            best = max(best, losses[v, j])
+            if reverse[v, j] >= 0:
+                best = max(best, losses[v, j] + gains[reverse[v, j]])
+        best_change[v] = best
 
 
 @inlined
@@ -330,38 +501,53 @@ def _has_bit(bits: NDArray[np.uint64], v: int) -> bool:
 
 
 @inlined
-def _may_reverse(state: Search, x: int, y: int, max_parents: int) -> bool:
+def _may_reverse(state: Search, y: int, j: int) -> bool:
     # Reversing x -> y closes a cycle where another path leads from x to y, through another parent of y.
-    if state.n_parents[x] == max_parents:
-        return False
+    # (Where x has no room for a parent, no addition to its parents gains anything.)
+    reached = state.reaches[state.parents[y, j]]
     closes = False
-    for z in state.parents[y, : state.n_parents[y]]:
-        closes |= z != x and _has_bit(state.reaches[x], z)
+    for i in range(state.n_parents[y]):
+        closes |= i != j and _has_bit(reached, state.parents[y, i])
     return not closes
 
 
 @inlined
+def _place(first: NDArray[np.int64], sources: NDArray[np.uint32], x: int, y: int) -> int:
+    # Of the arc x -> y; -1 if it is not permitted.
+    low, high = first[y], first[y + 1]
+    end = high
+    while low < high:
+        middle = (low + high) // 2
+        if sources[middle] < x:
+            low = middle + 1
+        else:
+            high = middle
+    return low if low < end and sources[low] == x else np.int64(-1)
+
+
+@inlined
 def _insert_parent(state: Search, x: int, y: int) -> None:
-    parents = state.parents[y]
+    parents, reverse = state.parents[y], state.reverse[y]
     j = state.n_parents[y]
     while j > 0 and parents[j - 1] > x:
         parents[j] = parents[j - 1]
+        reverse[j] = reverse[j - 1]
         j -= 1
     parents[j] = x
+    reverse[j] = _place(state.first, state.sources, y, x)
     state.n_parents[y] += 1
-    state.is_parent[y, x] = True
 
 
 @inlined
 def _remove_parent(state: Search, x: int, y: int) -> None:
-    parents = state.parents[y]
+    parents, reverse = state.parents[y], state.reverse[y]
     state.n_parents[y] -= 1
     j = 0
     while parents[j] != x:
         j += 1
     for k in range(j, state.n_parents[y]):
         parents[k] = parents[k + 1]
-    state.is_parent[y, x] = False
+        reverse[k] = reverse[k + 1]
 
 
 @inlined
@@ -374,27 +560,42 @@ def _add_reach(own: NDArray[np.uint64], others: NDArray[np.uint64], y: int) -> N
 
 @inlined
 def _extend_paths(state: Search, x: int, y: int) -> None:
-    # After x -> y was added.
-    for v in range(state.scores.shape[0]):
-        if v == x or _has_bit(state.reaches[v], x):
-            _add_reach(state.reaches[v], state.reaches[y], y)
+    # After x -> y was added: from x upwards, past nothing that reached y before, for neither do the paths
+    # beyond it.
+    if _has_bit(state.reaches[x], y):
+        return
+    stack = np.empty(state.scores.shape[0], dtype=np.int64)
+    stack[0] = x
+    size = 1
+    _add_reach(state.reaches[x], state.reaches[y], y)
+    while size > 0:
+        size -= 1
+        v = stack[size]
+        for u in state.parents[v, : state.n_parents[v]]:
+            if not _has_bit(state.reaches[u], y):
+                _add_reach(state.reaches[u], state.reaches[y], y)
+                stack[size] = u
+                size += 1
 
 
 @inlined
-def _trace_paths(state: Search) -> None:
-    # From the sinks upwards: a variable's turn comes when all its children have had theirs.
+def _trace_paths(state: Search, before: NDArray[np.uint64]) -> None:
+    # From the sinks upwards: a variable's turn comes when all its children have had theirs. What was known
+    # of the paths goes to `before`.
     p = state.scores.shape[0]
     n_children = np.zeros(p, dtype=np.int64)
     for y in range(p):
         for x in state.parents[y, : state.n_parents[y]]:
             n_children[x] += 1
+        for w in range(before.shape[1]):
+            before[y, w] = state.reaches[y, w]
+            state.reaches[y, w] = 0
     order = np.empty(p, dtype=np.int64)
     n_ready = 0
     for v in range(p):
         if n_children[v] == 0:
             order[n_ready] = v
             n_ready += 1
-    state.reaches.fill(0)
     for k in range(p):
         y = order[k]
         for x in state.parents[y, : state.n_parents[y]]:
@@ -406,28 +607,36 @@ def _trace_paths(state: Search) -> None:
 
 
 @inlined
-def _score_changes(columns: Columns, rule: Scoring, y: int, state: Search, space: Workspace) -> None:
+def _score_changes(
+    columns: Columns, rule: Scoring, is_equivalent: bool, y: int, state: Search, space: Workspace
+) -> None:
     # Scores y's family and the gain of every change to it.
-    k = state.n_parents[y]
-    parents, gains = state.parents[y, :k], state.gains[y]
-    if k == 0:
-        state.scores[y] = state.alone[y, y]
-        for x in range(gains.shape[0]):
-            gains[x] = state.alone[y, x]
-    elif k < state.parents.shape[1]:
-        state.scores[y] = _score_additions(
-            columns, rule, parents, y, state.is_parent[y], np.int64(0), gains, space
-        )
-    else:
-        state.scores[y] = score_family(columns, parents, y, rule, space)
-        for x in range(gains.shape[0]):
-            gains[x] = -np.inf
-    gains[y] = -np.inf
+    first, sources, alone, gains = state.first, state.sources, state.alone, state.gains
+    start, end, k = first[y], first[y + 1], state.n_parents[y]
+    parents = state.parents[y, :k]
+    has_room = k < state.parents.shape[1]
+    for a in range(start, end):
+        gains[a] = alone[a] if k == 0 else np.nan if has_room else -np.inf
     for j in range(k):
-        others = np.empty(k - 1, dtype=np.int64)
-        for i in range(k - 1):
-            others[i] = parents[i if i < j else i + 1]
-        gains[parents[j]] = score_family(columns, others, y, rule, space) - state.scores[y]
+        gains[_place(first, sources, parents[j], y)] = -np.inf
+    own = _score_additions(columns, rule, parents, y, sources[start:end], gains[start:end], space)
+    state.scores[y] = own
+    if k == 0:
+        for a in range(start, end):
+            if np.isnan(alone[a]):
+                alone[a] = gains[a]
+                # Score-equivalent scores gain the same from x -> y as from y -> x.
+                place = _place(first, sources, y, np.int64(sources[a])) if is_equivalent else np.int64(-1)
+                if place >= 0:
+                    alone[place] = gains[a]
+    for j in range(k):
+        if state.required[parents[j], y]:
+            state.losses[y, j] = -np.inf
+        else:
+            others = np.empty(k - 1, dtype=np.int64)
+            for i in range(k - 1):
+                others[i] = parents[i if i < j else i + 1]
+            state.losses[y, j] = score_family(columns, others, y, rule, space) - own
 
 
 @inlined
@@ -436,29 +645,21 @@ def _score_additions(
     rule: Scoring,
     parents: NDArray[np.int64],
     y: int,
-    is_parent: NDArray[np.bool_],
-    first: int | np.int64,
+    sources: NDArray[np.uint32],
     gains: NDArray[np.float64],
     space: Workspace,
 ) -> float:
-    # Fills gains[x] for x = first, ..., p - 1 that are neither y nor its parents, and returns the score
-    # of y with its parents alone.
+    # Fills the gain of each source that is NaN, and returns the score of y with its parents alone.
     r = columns.cardinalities[y]
     n_planes = split_planes(columns, parents, y, space) * r
     if n_planes > 0:
         q = joint_states(columns, parents)
         own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
-        _score_on_planes(columns, rule, parents, y, is_parent, first, gains, n_planes, own, space)
+        _score_on_planes(columns, rule, parents, y, sources, gains, n_planes, own, space)
     else:
         own = score_family(columns, parents, y, rule, space)
-    _score_by_index(columns, rule, parents, y, is_parent, first, gains, n_planes, own, space)
+    _score_by_index(columns, rule, parents, y, sources, gains, own, space)
     return own
-
-
-@inlined
-def _fits_planes(n_planes: int, offsets: NDArray[np.int64], x: int) -> bool:
-    r_added = offsets[x + 1] - offsets[x]
-    return bool(r_added > 0 and 0 < n_planes * (r_added - 1) <= MAX_OVERLAPS)
 
 
 @inlined
@@ -467,8 +668,7 @@ def _score_on_planes(
     rule: Scoring,
     parents: NDArray[np.int64],
     y: int,
-    is_parent: NDArray[np.bool_],
-    first: int | np.int64,
+    sources: NDArray[np.uint32],
     gains: NDArray[np.float64],
     n_planes: int,
     own: float,
@@ -483,11 +683,11 @@ def _score_on_planes(
     shift, penalty = r - 1 if rule.shifts else 0, rule.penalty * (r - 1)
     # Without parents, the cells of y's last state follow from the margins.
     n_counted = n_planes - 1 if parents.shape[0] == 0 else n_planes
-    for x in range(first, offsets.shape[0] - 1):
-        if x == y or is_parent[x] or not _fits_planes(n_planes, offsets, x):
+    for a in range(sources.shape[0]):
+        at = offsets[sources[a]]
+        r_added = offsets[sources[a] + 1] - at
+        if r_added == 0 or n_planes * (r_added - 1) > MAX_OVERLAPS or not np.isnan(gains[a]):
             continue
-        at = offsets[x]
-        r_added = offsets[x + 1] - at
         for c in range(n_planes * r_added):
             table[c] = 0
         count_within(planes, at, r_added, 0, n_words, base, base_sizes, n_counted, table)
@@ -501,11 +701,11 @@ def _score_on_planes(
         if ess > 0.0:
             of_cells = remembered(memo[0], divisors[0], ess, q_added * r)
             of_margins = remembered(memo[1], divisors[1], ess, q_added)
-            a, b = ess / (q_added * r), ess / q_added
-            score = sum_rises(table, n_parts, r, r_added, of_cells, a, of_margins, b)
+            of_cell, of_margin = ess / (q_added * r), ess / q_added
+            score = sum_rises(table, n_parts, r, r_added, of_cells, of_cell, of_margins, of_margin)
         else:
             score = sum_terms(table, n_parts, r, r_added, terms, shift) - penalty * q_added
-        gains[x] = score - own
+        gains[a] = score - own
 
 
 @inlined
@@ -514,10 +714,8 @@ def _score_by_index(
     rule: Scoring,
     parents: NDArray[np.int64],
     y: int,
-    is_parent: NDArray[np.bool_],
-    first: int | np.int64,
+    sources: NDArray[np.uint32],
     gains: NDArray[np.float64],
-    n_planes: int,
     own: float,
     space: Workspace,
 ) -> None:
@@ -529,9 +727,10 @@ def _score_by_index(
         family[j + 2] = parents[j]
     n_numbers = 0
     is_indexed = False
-    for x in range(first, columns.offsets.shape[0] - 1):
-        if x == y or is_parent[x] or _fits_planes(n_planes, columns.offsets, x):
+    for a in range(sources.shape[0]):
+        if not np.isnan(gains[a]):
             continue
+        x = np.int64(sources[a])
         r_added = columns.cardinalities[x]
         q_added = min(q * r_added, MAX_JOINT_STATES)
         if not is_indexed and n_numbers * r_added <= room:
@@ -545,7 +744,7 @@ def _score_by_index(
             family[1] = x
             score = score_occurring(columns, family, q_added, rule, space)
             is_indexed = False
-        gains[x] = score - own
+        gains[a] = score - own
 
 
 @warm_up
