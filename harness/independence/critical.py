@@ -110,3 +110,19 @@ def critical_value(critical: CriticalValues, df: float) -> float:
         else:
             high = middle
     return float(critical.value[low]) if low < critical.df.shape[0] else np.inf
+
+
+@inlined
+def deviates_beyond(statistic: float, critical: float, df: float) -> float:
+    """Say how far a chi-square statistic is beyond its critical value, in standard normal deviates.
+
+    With the cube roots of Wilson and Hilferty (1931), which are nearly normal: within 13 % of the exact
+    difference for p-values down to 1e-8 at 1 degree of freedom, within 2 % at 24.
+
+    Parameters
+    ----------
+    statistic, critical : float
+    df : float
+        Above 0.
+    """
+    return math.sqrt(4.5 * df) * ((statistic / df) ** (1 / 3) - (critical / df) ** (1 / 3))

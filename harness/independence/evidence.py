@@ -11,18 +11,13 @@ at best. The kernels of a learner take either and are compiled for each; they as
 
 *Association* puts the strengths of dependences with different degrees of freedom on one scale. It is 0
 where a test does not find x and y dependent. Else it says how far the statistic is beyond its critical
-value, in standard normal deviates: with the approximation of Wilson and Hilferty (1931),
-
-    sqrt(9 df / 2) ((statistic / df)^(1/3) - (critical value / df)^(1/3)),
-
-so that the smaller p-value has the greater association, also where both p-values are too small for floating
-point. For permutation tests, it is the distance of the statistic from the mean of its permutation
+value, in standard normal deviates (`deviates_beyond`): the smaller p-value has the greater association,
+also where both p-values are too small for floating point. For permutation tests, it is the distance of the statistic from the mean of its permutation
 distribution, in standard deviations.
 """
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 from typing import Any, Literal, NamedTuple, TypeVar, cast
 
@@ -39,7 +34,12 @@ from generators.errors import InputError
 from generators.graph import Graph
 from generators.separation import is_connected
 from harness.counts import Columns, prepare
-from harness.independence.critical import CriticalValues, attainable_critical_values, critical_value
+from harness.independence.critical import (
+    CriticalValues,
+    attainable_critical_values,
+    critical_value,
+    deviates_beyond,
+)
 from harness.independence.permutation import Permutations, deal_out, permutations_at
 from harness.independence.statistics import (
     ROUNDING,
@@ -315,8 +315,7 @@ def _association(evidence: Any, given: Any, x: Any, y: Any) -> Any:
             statistic = conditional_statistic(evidence.columns, given, x, y, evidence.work, is_pearson)
         if statistic <= limit + ROUNDING:
             return 0.0
-        roots = np.cbrt(statistic / df) - np.cbrt(limit / df)
-        return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
+        return max(deviates_beyond(statistic, limit, df), LEAST_ASSOCIATION)
 
     def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int) -> float:
         return 1.0 if is_dependent(evidence, given, x, y, 0.0) else 0.0

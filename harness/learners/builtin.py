@@ -18,6 +18,7 @@ BUILT_IN: Mapping[str, str] = MappingProxyType(
         "chow-liu": "harness.learners.marginal:chow_liu",
         "pc": "harness.learners.constraint:pc",
         "hill-climbing": "harness.learners.greedy_dag:hill_climbing",
+        "mmhc": "harness.learners.max_min:mmhc",
     }
 )
 

@@ -9,12 +9,16 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy.stats import chi2, chi2_contingency
+from scipy.stats import chi2, chi2_contingency, norm
 
 from generators.dataset import Dataset
 from generators.errors import InputError
 from harness.counts import count_plain, prepare
-from harness.independence.critical import attainable_critical_values, critical_values
+from harness.independence.critical import (
+    attainable_critical_values,
+    critical_values,
+    deviates_beyond,
+)
 from harness.independence.statistics import (
     conditional_statistics,
     dependent_pairs,
@@ -243,6 +247,18 @@ class TestCriticalValues:
         found = attainable_critical_values(0.01, np.arange(1, 256), 20_000.0)
 
         assert found.df[-1] < 33_000
+
+
+class TestDeviates:
+    """How far a statistic is beyond its critical value."""
+
+    @pytest.mark.parametrize(("df", "error"), [(1, 0.13), (2, 0.1), (6, 0.06), (24, 0.02), (96, 0.01)])
+    def test_close_to_exact(self, df: int, error: float) -> None:
+        """The difference of the normal deviates of p-value and level, both from scipy, within the error."""
+        for p_value in (0.03, 1e-2, 1e-4, 1e-8):
+            found = deviates_beyond.py_func(chi2.isf(p_value, df), chi2.isf(0.05, df), df)
+
+            assert found == pytest.approx(norm.isf(p_value) - norm.isf(0.05), rel=error)
 
 
 def plain_statistic(data: Dataset, x: int, y: int, given: list[int], test: str) -> float:

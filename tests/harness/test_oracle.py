@@ -18,6 +18,7 @@ from generators.separation import is_separated
 from harness.independence.evidence import Separations, marginally_dependent, separations_in
 from harness.knowledge import Knowledge
 from harness.learners.constraint import pc_on
+from harness.learners.max_min import find_candidates
 
 N_DAGS = 4000
 
@@ -85,3 +86,15 @@ def test_pc_with_knowledge(updates: str, colliders: str) -> None:
         assert class_under(dag, knowledge) == graph
         n_narrowed += graph != cpdag(dag)
     assert n_narrowed > N_DAGS // 20
+
+
+def test_candidates() -> None:
+    """The candidates of max-min hill climbing are the adjacent pairs of every DAG, told or not.
+
+    Tsamardinos, Brown and Aliferis (2006), theorem 1 (from memory).
+    """
+    for dag, evidence, rng in random_dags(N_DAGS, seed=4):
+        told = told_of(dag, rng)
+
+        assert np.array_equal(dag.skeleton, find_candidates(evidence))
+        assert np.array_equal(dag.skeleton, find_candidates(evidence, knowledge=told))
