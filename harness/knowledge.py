@@ -83,20 +83,48 @@ class Knowledge:
         gone = _pairs(order, excluded, "excluded", faults)
         stage = _stage_of_each(order, stages, faults)
         _stop(faults)
-        for x, y in np.argwhere(there & gone).tolist():
-            faults.append(f"the arc {order[x]!r} -> {order[y]!r} is said to be there and to be excluded.")
-        for x, y in np.argwhere(np.triu(there & there.T)).tolist():
-            faults.append(f"arcs are said to be there both ways between {order[x]!r} and {order[y]!r}.")
+        return cls.completed(order, there, gone, stage)
+
+    @classmethod
+    def completed(
+        cls,
+        names: tuple[str, ...],
+        arcs: NDArray[np.bool_],
+        excluded: NDArray[np.bool_],
+        stage: NDArray[np.float64],
+    ) -> Knowledge:
+        """Complete what is known, given as arrays, or say what contradicts what.
+
+        Parameters
+        ----------
+        names : tuple of str
+        arcs, excluded : bool array, shape (p, p)
+            [x, y] for x -> y.
+        stage : float64 array, shape (p,)
+            The number of each variable's stage, NaN for one that may be anywhere.
+
+        Raises
+        ------
+        InputError
+            With one line per contradiction.
+        """
+        faults = [
+            f"the arc {names[x]!r} -> {names[y]!r} is said to be there and to be excluded."
+            for x, y in np.argwhere(arcs & excluded).tolist()
+        ]
+        faults += [
+            f"arcs are said to be there both ways between {names[x]!r} and {names[y]!r}."
+            for x, y in np.argwhere(np.triu(arcs & arcs.T)).tolist()
+        ]
         _stop(faults)
         try:
-            in_order = Graph(order, there).order()
+            order = Graph(names, arcs).order()
         except InputError as error:
             raise InputError(f"arcs that are said to be there: {error}.") from None
-        paths = _paths(there, in_order)
-        faults += _backward_arcs(order, there, paths, stage)
-        _stop(faults)
-        backward = _backward(there, in_order, stage)
-        return cls(order, there, gone | backward | paths.T | np.eye(len(order), dtype=np.bool_))
+        paths = _paths(arcs, order)
+        _stop(list(_backward_arcs(names, arcs, paths, stage)))
+        itself = np.eye(len(names), dtype=np.bool_)
+        return cls(names, arcs.copy(), excluded | _backward(arcs, order, stage) | paths.T | itself)
 
     def __post_init__(self) -> None:
         for array in (self.arcs, self.excluded):
@@ -235,7 +263,7 @@ def _instead(word: str, known: Iterable[str]) -> str:
 
 
 def _strange(name: str, names: Iterable[str]) -> str:
-    return f"{name!r} is not a variable of the data.{nearest(name, names)}"
+    return f"{name!r} is not a variable.{nearest(name, names)}"
 
 
 def _pairs(

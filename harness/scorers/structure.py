@@ -25,6 +25,7 @@ from generators.compiled import kernel, warm_up
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.network import Network
+from harness.knowledge import Knowledge
 from harness.scorers.maps import NOT_A_DAG, map_measures
 from harness.scorers.registry import GRAPH_MEASURES
 from harness.scorers.truth import Truth
@@ -70,7 +71,9 @@ class Counts(NamedTuple):
     shared_colliders: int
 
 
-def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float | None]:
+def score(
+    truth: Network | Graph, learned: Graph | Network, *, knowledge: Knowledge | None = None
+) -> dict[str, float | None]:
     """Return all graph measures of a learned graph against the truth.
 
     Parameters
@@ -79,6 +82,9 @@ def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float |
         A graph must be a DAG.
     learned : Graph or Network
         Over the same names, in any order. If it is a DAG, `dag_shd` takes its arcs as causal claims.
+    knowledge : Knowledge, optional
+        What was known beforehand, over the same names: both classes are narrowed by it, and directions
+        that follow from it alone are not counted.
 
     Returns
     -------
@@ -98,8 +104,9 @@ def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float |
     >>> measures["dag_shd"], measures["class_shd"], measures["skeleton_f1"], measures["direction_recall"]
     (1.0, 2.0, 1.0, None)
     """
-    graph = learned.graph if isinstance(learned, Network) else learned
-    return score_answer(Truth.of(truth), graph, directions="causal").as_mapping()
+    target, graph = (each.graph if isinstance(each, Network) else each for each in (truth, learned))
+    known = None if knowledge is None else knowledge.over(target.names)
+    return score_answer(Truth.of(target, known), graph, directions="causal").as_mapping()
 
 
 def score_answer(truth: Truth, learned: Graph, *, returns: str = "pdag", directions: str = "class") -> Scores:
