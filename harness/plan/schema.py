@@ -19,6 +19,7 @@ from generators.streams import digest
 from harness.plan.entrants import LIMIT_KEYS, read_learners, read_limits
 from harness.plan.expansion import DATASETS, expand, n_variables, notes_on
 from harness.plan.messages import Faults, Section, unknown
+from harness.plan.telling import KNOWLEDGE
 from harness.records import Bound, Condition, Learner, Limits, Requirement
 from harness.scorers.registry import MEASURES
 
@@ -157,7 +158,7 @@ def parse_plan(text: str, path: Path | None = None) -> Plan:
 
     conditions = expand(networks, data, seed, folder)
     rows = _read_rows(data)
-    data.refuse_unknown((ROWS.name, DATASETS.name))
+    data.refuse_unknown((ROWS.name, DATASETS.name, KNOWLEDGE))
     own_limits = read_limits(limits)
     limits.refuse_unknown(LIMIT_KEYS)
     before = len(faults.lines)

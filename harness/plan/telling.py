@@ -41,6 +41,7 @@ from generators.streams import stream
 from harness.knowledge import Knowledge
 
 KNOWLEDGE = "knowledge"
+NOTHING = "nothing"
 
 Pairs = NDArray[np.int64]  # shape (m, 2), in the order in which they are told
 Marks = NDArray[np.bool_]
@@ -215,8 +216,8 @@ def sentence(conditions_data: Iterable[Mapping[str, Any]]) -> str | None:
 
     Examples
     --------
-    >>> sentence([{}, {"knowledge": {"arcs": 0.2, "wrong": 0.05}}])
-    'Told to learners beforehand: nothing; or 0.2 of the true arcs, 0.05 of that wrong.'
+    >>> sentence([{}, {"knowledge": {"arcs": 0.2, "stages": True, "wrong": 0.05}}])
+    'Told to learners beforehand: nothing; or 20 % of the true arcs, stages by generation, 5 % of each wrong.'
     """
     levels = list(dict.fromkeys(_in_words(data.get(KNOWLEDGE, {})) for data in conditions_data))
     if levels in ([], [NOTHING]):
@@ -224,22 +225,21 @@ def sentence(conditions_data: Iterable[Mapping[str, Any]]) -> str | None:
     return f"Told to learners beforehand: {'; or '.join(levels)}."
 
 
-NOTHING = "nothing"
-
-
 def _in_words(level: Mapping[str, Any]) -> str:
     parts = []
-    if "statements" in level:
-        said = level["statements"]
-        parts += [f"arcs of a file ({len(said['arcs'])})"] if "arcs" in said else []
-        parts += [f"exclusions of a file ({len(said['excluded'])})"] if "excluded" in said else []
-        parts += [f"stages of a file ({len(said['stages'])})"] if "stages" in said else []
+    for kind, said in level.get("statements", {}).items():
+        parts.append(f"{kind} from a file ({len(said)})")
     if "arcs" in level:
-        parts.append(f"{level['arcs']:g} of the true arcs")
+        parts.append(f"{_percent(level['arcs'])} of the true arcs")
     if "excluded" in level:
-        parts.append(f"{level['excluded']:g} of the arcs that are not there, as excluded")
+        parts.append(f"{_percent(level['excluded'])} of the arcs that are not there, as excluded")
     if "stages" in level:
         how = "by generation" if level["stages"] is True else f"in {level['stages']} waves"
-        parts.append(f"stages of all variables {how}")
-    wrong = f", {level['wrong']:g} of that wrong" if "wrong" in level else ""
-    return (" and ".join(parts) + wrong) or NOTHING
+        parts.append(f"stages {how}")
+    if "wrong" in level:
+        parts.append(f"{_percent(level['wrong'])} of each wrong")
+    return ", ".join(parts) or NOTHING
+
+
+def _percent(share: float) -> str:
+    return f"{100 * share:.10g} %"
