@@ -90,8 +90,8 @@ def notes_on_told(networks: Networks, effective: Mapping[str, Any]) -> list[str]
     if not strange and not denied:
         return []
     return [
-        f"what is told of {network_name(networks)} is not all true: {strange} of the arcs told are not in "
-        f"it, {denied} of its arcs are told to be excluded."
+        f"what is told of {network_name(networks)} is not all true: {strange} arcs are told that it has not, "
+        f"and {denied} are excluded that it has."
     ]
 
 

@@ -10,8 +10,11 @@ import networkx as nx
 import numpy as np
 import pytest
 
+from generators.dataset import Dataset
 from generators.errors import InputError
+from generators.graph import Graph
 from harness.knowledge import Knowledge, canonical, read_knowledge, read_statements
+from harness.studies.applying import learn
 
 NAMES = ("age", "sex", "dose", "cure")
 
@@ -266,3 +269,23 @@ def test_a_file_that_is_not_there_is_named(tmp_path: Path) -> None:
     """A path without a file is one line."""
     with pytest.raises(InputError, match=r"known\.toml: no such file"):
         read_knowledge(tmp_path / "known.toml", NAMES)
+
+
+# Real data
+
+
+def test_knowledge_is_given_to_a_method_from_python() -> None:
+    """In any order of names; other names, and methods that take none, are refused."""
+    data = Dataset(tuple("abc"), (("0", "1"),) * 3, np.zeros((4, 3), dtype=np.uint8))
+
+    def repeats(data: Dataset, *, knowledge: Knowledge | None = None) -> Graph:
+        assert knowledge is not None
+        return Graph(data.names, knowledge.arcs)
+
+    known = Knowledge.of("cab", arcs=[("a", "c")])
+
+    assert learn(repeats, data, knowledge=known).edges() == (("a", "c", "directed"),)
+    with pytest.raises(InputError, match="'z' is on one side only"):
+        learn(repeats, data, knowledge=Knowledge.of("abcz"))
+    with pytest.raises(InputError, match="no-arcs: takes no knowledge"):
+        learn("no-arcs", data, knowledge=known)

@@ -404,8 +404,8 @@ def test_what_is_told_wrong_of_a_given_network_is_noted(folder: Path) -> None:
 
     # The true arcs are cloudy -> sprinkler, cloudy -> rain, sprinkler -> wet_grass, rain -> wet_grass.
     assert plan.notes[0] == (
-        "what is told of sprinkler is not all true: 1 of the arcs told are not in it, 1 of its arcs are told "
-        "to be excluded."
+        "what is told of sprinkler is not all true: 1 arcs are told that it has not, and 1 are excluded that "
+        "it has."
     )
 
 

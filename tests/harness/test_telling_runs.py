@@ -13,16 +13,13 @@ import pandas as pd
 import pytest
 
 from generators.catalogue import published_network
-from generators.dataset import Dataset
-from generators.errors import InputError
 from generators.graph import Graph
-from harness.knowledge import Knowledge
 from harness.plan.recipes import dataset_key, draw_network, network_key
 from harness.plan.schema import read_plan
 from harness.plan.telling import rounded, told
 from harness.report.answers import build_answers
 from harness.report.text import render_text
-from harness.studies.applying import differences, learn
+from harness.studies.applying import differences
 from harness.studies.reading import Study, read_study, runs_table
 from harness.studies.rerunning import do_again
 from harness.studies.running import run_plan
@@ -275,20 +272,3 @@ label = "repeats"
     expected = [["cloudy", "rain", "directed"], ["rain", "wet_grass", "directed"]]
     assert [json.loads(graph) for graph in runs["graph"]] == 4 * [expected]
     assert do_again(study, runs["run"].iloc[0]).is_same
-
-
-def test_knowledge_is_given_to_a_method_from_python() -> None:
-    """In any order of names; other names, and methods that take none, are refused."""
-    data = Dataset(tuple("abc"), (("0", "1"),) * 3, np.zeros((4, 3), dtype=np.uint8))
-
-    def repeats(data: Dataset, *, knowledge: Knowledge | None = None) -> Graph:
-        assert knowledge is not None
-        return Graph(data.names, knowledge.arcs)
-
-    known = Knowledge.of("cab", arcs=[("a", "c")])
-
-    assert learn(repeats, data, knowledge=known).edges() == (("a", "c", "directed"),)
-    with pytest.raises(InputError, match="'z' is on one side only"):
-        learn(repeats, data, knowledge=Knowledge.of("abcz"))
-    with pytest.raises(InputError, match="no-arcs: takes no knowledge"):
-        learn("no-arcs", data, knowledge=known)
