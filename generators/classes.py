@@ -140,27 +140,38 @@ def is_equivalent(a: Graph, b: Graph) -> bool:
     return cpdag(a) == cpdag(b if a.names == b.names else b.reordered(a.names))
 
 
-def maximally_oriented(graph: Graph) -> Graph:
-    """Return the graph with every undirected edge directed that Meek's rules direct.
+def maximally_oriented(graph: Graph, known: NDArray[np.bool_] | None = None) -> Graph:
+    """Return the graph with every undirected edge directed that Meek's rules and knowledge direct.
 
     Parameters
     ----------
     graph : Graph
-        Usually a skeleton with its unshielded colliders directed (then the result is the CPDAG), or a
-        CPDAG with some more edges directed from background knowledge (then every edge that all DAGs in
-        accordance with both agree on is directed; Meek 1995).
+        Usually a skeleton with its unshielded colliders directed (then the result is the CPDAG), or the
+        CPDAG of a class whose members are narrowed down by `known`.
+    known : bool array, shape (p, p), optional
+        ``known[x, y]``: an edge between x and y can only be x -> y, if there is one.
 
     Notes
     -----
-    See `meek_rules` for the rules, and for what decides between them where the input contradicts itself.
+    See `meek_rules` and `known_directions` for the rules, and for what decides where the input
+    contradicts itself. An edge of a CPDAG comes out directed if and only if all DAGs of the class that
+    accord with the knowledge agree on its direction (Meek 1995), where there is any such DAG.
 
     Examples
     --------
     >>> maximally_oriented(Graph.from_edges("abcd", [("a", "c"), ("b", "c")], undirected=[("c", "d")]))
     Graph(4 variables: a -> c, b -> c, c -> d)
+    >>> chain = Graph.from_edges("abc", undirected=[("a", "b"), ("b", "c")])
+    >>> maximally_oriented(chain, np.array([[0, 1, 0], [0, 0, 0], [0, 0, 0]], dtype=bool))
+    Graph(3 variables: a -> b, b -> c)
     """
     arrow = np.array(graph.arrow)
-    meek_rules(arrow, NO_TRIPLES)
+    if known is None:
+        meek_rules(arrow, NO_TRIPLES)
+    else:
+        known = np.array(known, dtype=np.bool_, order="C")
+        known.flags.writeable = False
+        known_directions(arrow, known)
     return Graph(graph.names, arrow)
 
 
@@ -278,16 +289,72 @@ def meek_rules(arrow: Arrow, ambiguous: NDArray[np.int64]) -> None:
         between x and y; `NO_TRIPLES` where there is none.
     """
     at, nodes = neighbour_lists(arrow)
-    p = arrow.shape[0]
+    source, target, n = _directed_edges(at, nodes)
+    _close(arrow, at, nodes, ambiguous, source, target, 0, n)
+
+
+@kernel
+def known_directions(arrow: Arrow, known: Arrow) -> None:
+    """Direct undirected edges by Meek's rules and by knowledge until nothing applies, in place.
+
+    Edge by edge, by (x, y): a still undirected x - y with ``known[x, y]`` becomes x -> y, and what follows
+    from it by `meek_rules` is directed before the next one is looked at. So knowledge that contradicts
+    what stands there already, or what follows from earlier knowledge, is passed over: of a CPDAG's class
+    at least one DAG always accords with what comes out (Meek 1995).
+
+    Parameters
+    ----------
+    arrow : bool array, shape (p, p), C-contiguous
+        As for `meek_rules`.
+    known : bool array, shape (p, p), C-contiguous
+        [x, y]: an edge between x and y can only be x -> y.
+    """
+    at, nodes = neighbour_lists(arrow)
+    source, target, n = _directed_edges(at, nodes)
+    nothing = np.empty(0, np.int64)
+    n = _close(arrow, at, nodes, nothing, source, target, 0, n)
+    for x in range(arrow.shape[0]):
+        for y in nodes[at[3 * x + 1] : at[3 * x + 2]]:
+            if known[x, y] and arrow[x, y] and arrow[y, x]:
+                more = _direct(arrow, x, y, source, target, n)
+                n = _close(arrow, at, nodes, nothing, source, target, n, more)
+
+
+@kernel
+def narrowed_lists(at: Offsets, nodes: Nodes, known: Arrow) -> tuple[Offsets, Nodes]:
+    """Direct what knowledge directs in a class given as neighbour lists; see `known_directions`."""
+    arrow = arrow_from_lists(at, nodes)
+    known_directions(arrow, known)
+    return neighbour_lists(arrow)
+
+
+@inlined
+def _directed_edges(at: Offsets, nodes: Nodes) -> tuple[Nodes, Nodes, int]:
+    """List the directed edges by (source, target), with room for all edges."""
     source = np.empty(nodes.size // 2, np.uint32)
     target = np.empty(nodes.size // 2, np.uint32)
     n = 0
-    for i in range(p):
+    for i in range(at.size // 3):
         for j in nodes[at[3 * i + 2] : at[3 * i + 3]]:
             source[n] = i
             target[n] = j
             n += 1
-    done = 0
+    return source, target, n
+
+
+@inlined
+def _close(
+    arrow: Arrow,
+    at: Offsets,
+    nodes: Nodes,
+    ambiguous: NDArray[np.int64],
+    source: Nodes,
+    target: Nodes,
+    done: int,
+    n: int,
+) -> int:
+    """Work off the directed edges from `done` on, with those that are added, and return their number."""
+    p = arrow.shape[0]
     while done < n:
         x, y = source[done], target[done]
         done += 1
@@ -313,6 +380,7 @@ def meek_rules(arrow: Arrow, ambiguous: NDArray[np.int64]) -> None:
                 around_a = nodes[at[3 * a] : at[3 * a + 3]]
                 if _rule_3(arrow, a, x, y, around_a, ambiguous):
                     n = _direct(arrow, a, y, source, target, n)
+    return n
 
 
 @inlined
@@ -503,4 +571,7 @@ def _compile() -> None:
     graph = Graph.from_edges("abcd", directed=[("a", "c"), ("b", "c")], undirected=[("c", "d")])
     class_of(graph)
     maximally_oriented(graph)
+    maximally_oriented(graph, graph.arrow)
     unshielded_colliders(graph)
+    lists = class_lists(graph.arrow)
+    narrowed_lists(lists.at, lists.nodes, graph.arrow)

@@ -205,7 +205,8 @@ class Condition:
         `topology`, `states`, `cpts` and the settings of that topology and CPT family), or `file`, or
         `published`.
     data : mapping
-        Effective [data] keys other than `rows` and `datasets`.
+        Effective [data] keys other than `rows` and `datasets`: `knowledge` (see `harness.plan.telling`),
+        where anything is told.
     factors : mapping of str to str, int or float
         The keys that vary over the plan, with this condition's levels: what tables show.
     replicates : int

@@ -208,6 +208,72 @@ def test_a_learner_is_applied_to_a_file(tmp_path: Path, capsys: pytest.CaptureFi
     assert first.read_text().startswith("source,target,kind\n")
 
 
+REPEATS = """
+from generators.graph import Graph
+
+def learn(data, *, knowledge=None):
+    "Answer with the arcs that were told."
+    return Graph(data.names, knowledge.arcs)
+"""
+
+
+def test_a_learner_is_told_what_a_file_says(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """`learn --knowledge` reads arcs, excluded and stages by the names of the data file."""
+    rows, known = tmp_path / "rows.csv", tmp_path / "known.toml"
+    (tmp_path / "own.py").write_text(REPEATS)
+    run_command(["network", "sample", "sprinkler", "--rows", "20", "--seed", "3", "-o", str(rows), "--quiet"])
+    known.write_text('arcs = [["rain", "wet_grass"]]\nstages = [["cloudy"], ["rain", "sprinkler"]]\n')
+    method = f"{tmp_path / 'own.py'}:learn"
+
+    document = json_of(capsys, "learn", str(rows), "--method", method, "--knowledge", str(known))
+
+    assert isinstance(document, dict)
+    assert document["edges"] == [["rain", "wet_grass", "directed"]]
+
+
+@pytest.mark.parametrize(
+    ("method", "text", "expected"),
+    [
+        ("no-arcs", "arcs = []", "no-arcs: takes no knowledge"),
+        ("own", 'arcs = [["rain", "wet_gras"]]', "'wet_gras' is not a variable. Did you mean 'wet_grass'?"),
+        ("own", 'arc = [["rain", "wet_grass"]]', "arc: unknown key. Did you mean 'arcs'?"),
+        ("own", "arcs = [", "known.toml:1:9: Invalid value"),
+        (
+            "own",
+            'arcs = [["rain", "cloudy"]]\nstages = [["cloudy"], ["rain"]]',
+            "arcs lead from 'rain', which stands in stages[2], to 'cloudy', which stands in stages[1].",
+        ),
+    ],
+)
+def test_wrong_knowledge_is_one_line_and_exit_code_2(
+    method: str, text: str, expected: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """What is wrong is said with the file, or the method's name, and nothing is learned."""
+    rows, known = tmp_path / "rows.csv", tmp_path / "known.toml"
+    (tmp_path / "own.py").write_text(REPEATS)
+    run_command(["network", "sample", "sprinkler", "--rows", "20", "--seed", "3", "-o", str(rows), "--quiet"])
+    known.write_text(text)
+    method = f"{tmp_path / 'own.py'}:learn" if method == "own" else method
+    capsys.readouterr()
+
+    assert run_command(["learn", str(rows), "--method", method, "--knowledge", str(known)]) == 2
+
+    captured = capsys.readouterr()
+    assert expected in captured.err
+    assert len(captured.err.splitlines()) == 1
+    assert captured.out == ""
+
+
+def test_a_listed_learner_says_whether_it_takes_knowledge(capsys: pytest.CaptureFixture[str]) -> None:
+    """`list learners NAME` has it among the facts."""
+    document = json_of(capsys, "list", "learners", "no-arcs")
+
+    assert isinstance(document, dict)
+    assert document["takes_knowledge"] is False
+    run_command(["list", "learners", "no-arcs"])
+    assert "takes_knowledge: False" in capsys.readouterr().out
+
+
 def test_a_study_says_how_the_real_file_differs(
     study: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:

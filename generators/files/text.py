@@ -6,12 +6,15 @@ import csv
 import io
 import os
 import re
+import tomllib
 from collections.abc import Iterable, Iterator
+from typing import Any
 
 from generators.errors import InputError
 
 # A decimal number, and none of the other texts that `float` takes (nan, 1_000).
 NUMBER = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
+_TOML_POSITION = re.compile(r" \(at (?:line (\d+), column (\d+)|end of document)\)$")
 # A leading byte-order mark is quoted too, or a reader would take it for the file's own.
 _QUOTED_FIELD = re.compile(r'[,"\r\n]|\A\s|\s\Z|\A\ufeff')
 
@@ -68,6 +71,40 @@ def read_text(path: str | os.PathLike[str]) -> str:
         As `read_bytes` and `decode`.
     """
     return decode(read_bytes(path), os.fspath(path))
+
+
+def parse_toml(text: str, where: str) -> dict[str, Any]:
+    """Read TOML.
+
+    Raises
+    ------
+    InputError
+        If it is none; the message names line and column.
+
+    Examples
+    --------
+    >>> parse_toml("seed = 1", "plan.toml")
+    {'seed': 1}
+    >>> parse_toml("seed 1", "plan.toml")
+    Traceback (most recent call last):
+        ...
+    generators.errors.InputError: plan.toml:1:6: Expected '=' after a key in a key/value pair.
+    """
+    try:
+        return tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        message = str(error)
+        found = _TOML_POSITION.search(message)
+        line, column = (found[1], found[2]) if found else (None, None)
+        if line is None:
+            lines = text.split("\n")
+            line, column = len(lines), len(lines[-1]) + 1
+        what = " ".join(_TOML_POSITION.sub("", message).split())
+        raise InputError(f"{where}:{line}:{column}: {what}.") from None
+    except ValueError as error:  # a number with more digits than Python converts
+        raise InputError(f"{where}: {' '.join(str(error).split())}.") from None
+    except RecursionError:
+        raise InputError(f"{where}: is nested too deeply.") from None
 
 
 def shown(text: str) -> str:

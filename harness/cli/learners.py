@@ -15,6 +15,7 @@ from harness.cli.output import examples, print_json, say, seed_or_drawn, shared_
     epilog=examples(
         "arcassay learn survey.csv --method pc --set alpha=0.05 -o graph.csv",
         'arcassay learn survey.csv --from plan.toml --label "PC, 1 %" -o graph.csv',
+        "arcassay learn survey.csv --method pc --knowledge known.toml -o graph.csv",
     )
 )
 @click.argument("data", type=click.Path(path_type=Path))
@@ -26,6 +27,11 @@ from harness.cli.output import examples, print_json, say, seed_or_drawn, shared_
     "--from", "study", type=click.Path(path_type=Path), help="A study whose learner is to be applied."
 )
 @click.option("--label", help="Which learner of the study.")
+@click.option(
+    "--knowledge",
+    type=click.Path(path_type=Path),
+    help="A TOML file of what is known: arcs, excluded, stages.",
+)
 @click.option(
     "--seed", type=click.IntRange(0), help="Of the learner's randomness; drawn and printed if absent."
 )
@@ -39,6 +45,7 @@ def learn(
     settings: tuple[str, ...],
     study: Path | None,
     label: str | None,
+    knowledge: Path | None,
     seed: int | None,
     output: Path | None,
     as_json: bool,
@@ -46,16 +53,25 @@ def learn(
 ) -> int:
     """Apply a learner to a real data file (CSV with a header; every column a variable).
 
-    With --from, also say how the file differs from what the study rehearsed. The graph holds what the
+    With --from, also say how the file differs from what the study rehearsed. A knowledge file says
+    arcs = [["age", "income"]], excluded = [["income", "age"]], stages = [["age"], ["income"]], each as far
+    as it is known. The graph holds what the
     method found in these rows; an edge is not a cause, and where health or safety is at stake it is no
     ground for a decision without a statistician and the rules of that field.
     """
     import numpy as np
 
     from generators.files import read_data_with_notes, write_graph
+    from harness.knowledge import read_knowledge
     from harness.learners.specification import InvalidAnswer, call
     from harness.records import Declined
-    from harness.studies.applying import differences, find_specification, parse_settings, rehearsed_learner
+    from harness.studies.applying import (
+        differences,
+        find_specification,
+        parse_settings,
+        refuse_knowledge_not_taken,
+        rehearsed_learner,
+    )
 
     if (method is None) == (study is None):
         raise InputError("learn: needs either --method NAME or --from STUDY")
@@ -68,16 +84,20 @@ def learn(
         facts = read_study(find_ledger(study)).facts
         learner, specification = rehearsed_learner(facts, label)
         parsed = dict(learner.settings)
-        notes = (*notes, *differences(facts, rows))
+        notes = (*notes, *differences(facts, rows, has_knowledge=knowledge is not None))
     else:
         assert method is not None
         if label is not None:
             raise InputError("learn: --label goes with --from")
         specification = find_specification(method)
         parsed = parse_settings(specification, parse_assignments(settings))
+    known = None
+    if knowledge is not None:
+        refuse_knowledge_not_taken(specification)
+        known = read_knowledge(knowledge, rows.names)
     seed = seed_or_drawn(seed, quiet=quiet or not specification.takes_rng)
     try:
-        graph = call(specification, rows, parsed, np.random.default_rng(seed)).graph
+        graph = call(specification, rows, parsed, np.random.default_rng(seed), known).graph
     except Declined as error:
         raise InputError(f"{data}: {specification.name} declined: {error}") from None
     except InvalidAnswer as error:

@@ -21,9 +21,11 @@ from generators.sampling import sample
 from generators.streams import canonical_json, digest
 from harness.execution import memory
 from harness.execution.messages import Request, Work
+from harness.knowledge import Knowledge
 from harness.learners.specification import InvalidAnswer, Specification, call
 from harness.ledger.store import DrawnDataset, DrawnNetwork, edge_positions, graph_of
 from harness.plan.recipes import draw_network, draw_view, learner_rng
+from harness.plan.telling import told
 from harness.records import Answer, Declined, Learner, Outcome, Status
 from harness.scorers.structure import score_answer
 from harness.scorers.truth import Truth
@@ -42,6 +44,7 @@ class Material:
     truth: Truth
     view: View
     masked: Dataset
+    knowledge: Knowledge | None  # what learners are told, over the masked variables
 
     @property
     def drawn_network(self) -> DrawnNetwork:
@@ -54,7 +57,10 @@ class Material:
     @property
     def drawn_dataset(self) -> DrawnDataset:
         """The dataset as the ledger stores it."""
-        view_digest = digest("view", self.view.words())
+        words: list[Any] = list(self.view.words())
+        if self.knowledge is not None:
+            words += [np.packbits(own).tobytes() for own in (self.knowledge.arcs, self.knowledge.excluded)]
+        view_digest = digest("view", words)
         return DrawnDataset(
             self.work.dataset_key, self.work.index, canonical_json(self.work.data), view_digest
         )
@@ -94,14 +100,19 @@ class MaterialSource:
         self._truth: Truth | None = None
 
     def draw(self, work: Work) -> Material:
-        """Draw network, dataset and view of some work."""
+        """Draw network, dataset, view and knowledge of some work."""
         if self._network is None or self._truth is None or self._key != work.network_key:
             self._network = draw_network(work.networks, work.network_key)
             self._truth = Truth.of(self._network)
             self._key = work.network_key
         data = sample(self._network, work.max_rows, work.dataset_key)
         view = draw_view(work.dataset_key, self._network.cardinalities.tolist())
-        return Material(work, self._network, self._truth, view, view.mask(data))
+        masked, truth = view.mask(data), self._truth
+        knowledge = told(self._network.graph, work.data, work.dataset_key)
+        if knowledge is not None:
+            truth = Truth.of(self._network, knowledge)
+            knowledge = knowledge.reordered(view.columns, masked.names)
+        return Material(work, self._network, truth, view, masked, knowledge)
 
 
 def compile_for_wide_codes(specification: Specification, material: Material, request: Request) -> None:
@@ -113,7 +124,8 @@ def compile_for_wide_codes(specification: Specification, material: Material, req
     if material.masked.codes.dtype != np.uint8:
         rng = learner_rng(material.work.dataset_key, request.rows)
         with contextlib.suppress(Exception):  # what is wrong shows in the run itself
-            call(specification, material.masked.first(min(2, request.rows)), request.settings, rng)
+            data = material.masked.first(min(2, request.rows))
+            call(specification, data, request.settings, rng, material.knowledge)
 
 
 def timed_call(specification: Specification, material: Material, request: Request) -> Timed:
@@ -127,14 +139,14 @@ def timed_call(specification: Specification, material: Material, request: Reques
     beginning = rng.bit_generator.state
     load = os.getloadavg()[0]
     memory.reset_peak()
-    answer, wall, cpu = _clocked(specification, data, request.settings, rng)
+    answer, wall, cpu = _clocked(specification, data, request.settings, rng, material.knowledge)
     peak = memory.peak_mb()
     walls, cpus = [wall], [cpu]
     if wall < REPEAT_BELOW_SECONDS:
         with contextlib.suppress(Exception):
             for _ in range(CALLS_WHEN_SHORT - 1):
                 rng.bit_generator.state = beginning
-                _, wall, cpu = _clocked(specification, data, request.settings, rng)
+                _, wall, cpu = _clocked(specification, data, request.settings, rng, material.knowledge)
                 walls.append(wall)
                 cpus.append(cpu)
     graph = material.view.unmask(answer.graph, material.network.names)
@@ -185,11 +197,15 @@ def _plain(text: str) -> str:
 
 
 def _clocked(
-    specification: Specification, data: Dataset, settings: Mapping[str, Any], rng: np.random.Generator
+    specification: Specification,
+    data: Dataset,
+    settings: Mapping[str, Any],
+    rng: np.random.Generator,
+    knowledge: Knowledge | None,
 ) -> tuple[Answer, float, float]:
     cpu = _cpu_clock()
     wall = time.perf_counter()
-    answer = call(specification, data, settings, rng)
+    answer = call(specification, data, settings, rng, knowledge)
     return answer, time.perf_counter() - wall, _cpu_clock() - cpu
 
 

@@ -30,6 +30,8 @@ if TYPE_CHECKING:
     from generators.network import Cpt as Cpt
     from generators.network import Network as Network
     from generators.topologies import generate_graph as generate_graph
+    from harness.knowledge import Knowledge as Knowledge
+    from harness.knowledge import read_knowledge as read_knowledge
     from harness.learners.specification import learner as learner
     from harness.ledger.store import Ledger as Ledger
     from harness.plan.schema import Plan as Plan
@@ -47,6 +49,7 @@ _PUBLIC = {
     "Declined": "harness.records:Declined",
     "Graph": "generators.graph:Graph",
     "InputError": "generators.errors:InputError",
+    "Knowledge": "harness.knowledge:Knowledge",
     "Ledger": "harness.ledger.store:Ledger",
     "Network": "generators.network:Network",
     "Plan": "harness.plan.schema:Plan",
@@ -56,6 +59,7 @@ _PUBLIC = {
     "learner": "harness.learners.specification:learner",
     "read_data": "generators.files:read_data",
     "read_graph": "generators.files:read_graph",
+    "read_knowledge": "harness.knowledge:read_knowledge",
     "read_network": "generators.files:read_network",
     "read_plan": "harness.plan.schema:read_plan",
     "run": "harness.studies.running:run_plan",

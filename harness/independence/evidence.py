@@ -12,8 +12,8 @@ at best. The kernels of a learner take either and are compiled for each; they as
 *Association* puts the strengths of dependences with different degrees of freedom on one scale. It is 0
 where a test does not find x and y dependent. Else it says how far the statistic is beyond its critical
 value, in standard normal deviates (`deviates_beyond`): the smaller p-value has the greater association,
-also where both p-values are too small for floating point. For permutation tests, it is the distance of the statistic from the mean of its permutation
-distribution, in standard deviations.
+also where both p-values are too small for floating point. For permutation tests, it is the distance of
+the statistic from the mean of its permutation distribution, in standard deviations.
 """
 
 from __future__ import annotations

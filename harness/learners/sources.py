@@ -184,6 +184,8 @@ def _check_call(specification: Specification, place: str, name: str) -> None:
     given: dict[str, Any] = dict.fromkeys(specification.settings)
     if specification.takes_rng:
         given["rng"] = None
+    if specification.takes_knowledge:
+        given["knowledge"] = None
     try:
         inspect.signature(specification.function).bind(None, **given)
     except TypeError as error:

@@ -1,9 +1,11 @@
 """What a learner is: a function, and what it declares about itself.
 
-A learner is called as ``function(data, rng=rng, **settings)`` with a `Dataset` under neutral names and
-returns a `Graph`, a networkx directed graph (arcs in both directions make an undirected edge), an edge
-list as a pandas frame with the columns source, target and optionally kind, or an `Answer`. It must not
-change its input, print, or leave anything behind. It raises `Declined` for data that it cannot take.
+A learner is called as ``function(data, rng=rng, knowledge=knowledge, **settings)`` with a `Dataset` under
+neutral names; `rng` and `knowledge` (a `Knowledge` over the same names, or None) are left out where its
+signature has no such argument. It returns a `Graph`, a networkx directed graph (arcs in both directions
+make an undirected edge), an edge list as a pandas frame with the columns source, target and optionally
+kind, or an `Answer`. It must not change its input, print, or leave anything behind. It raises `Declined`
+for data that it cannot take.
 """
 
 from __future__ import annotations
@@ -19,6 +21,7 @@ from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import DIRECTED, UNDIRECTED, Graph
 from generators.settings import Setting, settings_of
+from harness.knowledge import Knowledge
 from harness.records import Answer, Declined
 
 RETURNS = ("dag", "cpdag", "pdag", "skeleton")
@@ -73,7 +76,8 @@ class Specification:
         Conformance check -> why the learner need not pass it.
     baseline : bool
         Whether it is a trivial method that is never picked.
-    takes_rng : bool
+    takes_rng, takes_knowledge : bool
+        Whether the function has such an argument.
     """
 
     name: str
@@ -88,6 +92,7 @@ class Specification:
     exempt: Mapping[str, str] = field(default_factory=dict)
     baseline: bool = False
     takes_rng: bool = True
+    takes_knowledge: bool = False
 
     @property
     def summary(self) -> str:
@@ -158,7 +163,7 @@ def learner(
             revision,
             dict(exempt or {}),
             baseline,
-            "rng" in inspect.signature(function).parameters,
+            *_takes(function),
         )
         setattr(function, ATTRIBUTE, specification)
         return function
@@ -174,9 +179,19 @@ def specification_of(function: Callable[..., Any]) -> Specification:
     if not callable(function):
         raise InputError(f"a learner must be a function, got {type(function).__name__}")
     name = getattr(function, "__name__", type(function).__name__)
+    takes_rng, takes_knowledge = _takes(function)
     return Specification(
-        name, function, _settings(name, function), takes_rng="rng" in inspect.signature(function).parameters
+        name,
+        function,
+        _settings(name, function),
+        takes_rng=takes_rng,
+        takes_knowledge=takes_knowledge,
     )
+
+
+def _takes(function: Callable[..., Any]) -> tuple[bool, bool]:
+    parameters = inspect.signature(function).parameters
+    return "rng" in parameters, "knowledge" in parameters
 
 
 def _settings(name: str, function: Callable[..., Any]) -> dict[str, Setting]:
@@ -187,7 +202,11 @@ def _settings(name: str, function: Callable[..., Any]) -> dict[str, Setting]:
 
 
 def call(
-    specification: Specification, data: Dataset, settings: Mapping[str, Any], rng: np.random.Generator
+    specification: Specification,
+    data: Dataset,
+    settings: Mapping[str, Any],
+    rng: np.random.Generator,
+    knowledge: Knowledge | None = None,
 ) -> Answer:
     """Call a learner and bring its answer into one form.
 
@@ -198,6 +217,8 @@ def call(
     settings : mapping
         Already in their declared types; the others keep their defaults.
     rng : numpy.random.Generator
+    knowledge : Knowledge, optional
+        Over the data's variables; a learner that takes none never sees it.
 
     Raises
     ------
@@ -208,7 +229,9 @@ def call(
     """
     if data.has_missing and not specification.missing:
         raise Declined(f"{specification.name} takes no missing cells")
-    extra = {"rng": rng} if specification.takes_rng else {}
+    extra: dict[str, Any] = {"rng": rng} if specification.takes_rng else {}
+    if specification.takes_knowledge:
+        extra["knowledge"] = knowledge
     return to_answer(specification, specification.function(data, **settings, **extra), data.names)
 
 

@@ -26,6 +26,7 @@ replicates = {replicates:<19}# networks per combination: fewer are quicker and l
 [data]
 rows = {rows}    # how many rows learners see
 datasets = 1                    # per network
+# knowledge = {{arcs = 0.2, stages = true}}    # told to learners that take it: true arcs, stages in time
 
 # One [[learner]] each. Keys other than method, label and limits are the method's settings;
 # instead of alpha = 0.01, vary = {{alpha = [0.01, 0.05]}} would make two learners.

@@ -1,4 +1,4 @@
-"""From the [networks] table to conditions: factors crossed, unused keys dropped, equal ones merged."""
+"""From [networks] and `data.knowledge` to conditions: factors crossed, unused keys dropped, equals merged."""
 
 from __future__ import annotations
 
@@ -27,6 +27,8 @@ from harness.plan.recipes import (
     is_given,
     network_key,
 )
+from harness.plan.telling import KNOWLEDGE, sentence
+from harness.plan.told_levels import check_told, notes_on_told, read_told
 from harness.records import Condition, Learner
 
 MAX_CONDITIONS = 2_000
@@ -67,6 +69,7 @@ def expand(networks: Section, data: Section, seed: int, folder: Path) -> tuple[C
     found = _given(networks, given, folder) if given else _generated(networks)
     is_sound = len(networks.faults.lines) == before
     datasets = data.read(DATASETS, GIVEN_DATASETS if given else DATASETS.default)
+    told_levels = read_told(data, folder, is_given=bool(given))
     if not is_sound:
         return ()
     levels = list({canonical_json(level): level for level in found}.values())
@@ -74,10 +77,26 @@ def expand(networks: Section, data: Section, seed: int, folder: Path) -> tuple[C
         _try_out(networks, level, seed)
     if given:
         _refuse_twins(networks, given[0], levels)
+    for told in told_levels:
+        check_told(told, levels)
+    if len(levels) * len(told_levels) > MAX_CONDITIONS:
+        data.fault(KNOWLEDGE, _too_many(len(levels) * len(told_levels)))
+        return ()
     return tuple(
-        Condition(level, {}, factors, replicates, datasets)
+        Condition(
+            level,
+            {KNOWLEDGE: told.effective} if told.effective else {},
+            {**factors, KNOWLEDGE: told.text} if len(told_levels) > 1 else factors,
+            replicates,
+            datasets,
+        )
         for level, factors in zip(levels, _factors(levels, networks.content), strict=True)
+        for told in told_levels
     )
+
+
+def _too_many(n_levels: int) -> str:
+    return f"the lists cross to {n_levels} conditions; at most {MAX_CONDITIONS} are accepted"
 
 
 def settings_for(learner: Learner, condition: Condition) -> dict[str, Any]:
@@ -133,10 +152,13 @@ def _drawn_mean_parents(networks_json: str) -> float:
 
 
 def notes_on(conditions: Iterable[Condition]) -> list[str]:
-    """Say what was noted when network files were read, and what a cap on the parents takes away."""
+    """Say what a reader should know: of network files, of a cap on the parents, of what is told."""
+    conditions = list(conditions)
     notes: list[str] = []
-    for own in (condition.networks for condition in conditions):
+    for condition in conditions:
+        own = condition.networks
         notes += given_notes(own)
+        notes += notes_on_told(own, condition.data.get(KNOWLEDGE, {}))
         if own.get("topology") != "random-order":
             continue
         asked, expected = own["variables"] * own["mean_parents"], own["variables"] * mean_parents(own)
@@ -145,7 +167,8 @@ def notes_on(conditions: Iterable[Condition]) -> list[str]:
                 f"random-order networks of {own['variables']} variables: {expected:.1f} arcs expected after "
                 f"the cap of {own['max_parents']} parents, {asked:.1f} asked for."
             )
-    return list(dict.fromkeys(notes))
+    said = sentence(condition.data for condition in conditions)
+    return list(dict.fromkeys([*notes, *([said] if said else [])]))
 
 
 def default_mean_parents(variables: int) -> float:
@@ -224,9 +247,7 @@ def _generated(section: Section) -> list[Networks]:
         return []
     n_levels = math.prod(len(own) for own in levels.values())
     if n_levels > MAX_CONDITIONS:
-        section.faults.add(
-            section.place, f"the lists cross to {n_levels} conditions; at most {MAX_CONDITIONS} are accepted"
-        )
+        section.faults.add(section.place, _too_many(n_levels))
         return []
     return [
         _effective(section, dict(zip(levels, level, strict=True)))

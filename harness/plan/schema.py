@@ -7,18 +7,19 @@ from __future__ import annotations
 
 import math
 import re
-import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from generators.errors import InputError
+from generators.files.text import parse_toml
 from generators.settings import Between, Setting
 from generators.streams import digest
 from harness.plan.entrants import LIMIT_KEYS, read_learners, read_limits
 from harness.plan.expansion import DATASETS, expand, n_variables, notes_on
 from harness.plan.messages import Faults, Section, unknown
+from harness.plan.telling import KNOWLEDGE
 from harness.records import Bound, Condition, Learner, Limits, Requirement
 from harness.scorers.registry import MEASURES
 
@@ -48,7 +49,6 @@ GATE = (
 )
 _ONE_AT_MOST = ("share", "0 or 1")
 _BOUND = re.compile(r"\s*([A-Za-z_]+)\s*(>=|<=|>|<)\s*(\S+)\s*")
-_POSITION = re.compile(r" \(at (?:line (\d+), column (\d+)|end of document)\)$")
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,7 +158,7 @@ def parse_plan(text: str, path: Path | None = None) -> Plan:
 
     conditions = expand(networks, data, seed, folder)
     rows = _read_rows(data)
-    data.refuse_unknown((ROWS.name, DATASETS.name))
+    data.refuse_unknown((ROWS.name, DATASETS.name, KNOWLEDGE))
     own_limits = read_limits(limits)
     limits.refuse_unknown(LIMIT_KEYS)
     before = len(faults.lines)
@@ -194,21 +194,7 @@ def expected_runs(plan: Plan) -> int:
 def _parsed(text: str, name: str) -> dict[str, Any]:
     if len(text) > MAX_TEXT:
         raise InputError(f"{name}: is {len(text)} characters long; at most {MAX_TEXT} are accepted")
-    try:
-        return tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
-        message = str(error)
-        found = _POSITION.search(message)
-        line, column = (found[1], found[2]) if found else (None, None)
-        if line is None:
-            lines = text.split("\n")
-            line, column = len(lines), len(lines[-1]) + 1
-        what = " ".join(_POSITION.sub("", message).split())
-        raise InputError(f"{name}:{line}:{column}: {what}.") from None
-    except ValueError as error:  # a number with more digits than Python converts
-        raise InputError(f"{name}: {' '.join(str(error).split())}.") from None
-    except RecursionError:
-        raise InputError(f"{name}: is nested too deeply.") from None
+    return parse_toml(text, name)
 
 
 def _refuse_long_integers(place: str, value: Any, faults: Faults) -> None:

@@ -8,6 +8,7 @@ from typing import Any
 from harness.analysis.assurance import GridAnswer, MetShare
 from harness.analysis.intervals import least_n_to_show
 from harness.analysis.means import Summary
+from harness.plan import telling
 from harness.records import Condition, Learner, Requirement
 from harness.report.tables import Column, count_of, fixed, joined, plural, seconds_text, value_text
 from harness.studies.facts import StudyFacts
@@ -219,21 +220,25 @@ def truth(conditions: Sequence[Condition]) -> tuple[str, ...]:
         said.append(f"Networks are drawn at random: {_settings(drawn, 'networks')}.")
     if given:
         said.append(f"Networks are given: {_settings(given, 'networks')}.")
-    distorted = _settings(conditions, "data")
+    distorted = _settings(conditions, "data", without=telling.KNOWLEDGE)
     said.append(
         f"Data: {distorted}."
         if distorted
         else "Data: independent rows from each network, all variables observed, nothing missing or "
         "misclassified."
     )
+    if (told := telling.sentence(condition.data for condition in conditions)) is not None:
+        said.append(told)
     return tuple(said)
 
 
-def _settings(conditions: Sequence[Condition], table: str) -> str:
+def _settings(conditions: Sequence[Condition], table: str, without: str = "") -> str:
     """Return the settings of conditions, each with every level it takes."""
     levels: dict[str, list[str]] = {}
     for condition in conditions:
         for key, value in getattr(condition, table).items():
+            if key == without:
+                continue
             own = levels.setdefault(key, [])
             if str(value) not in own:
                 own.append(str(value))
@@ -316,6 +321,12 @@ def cautions(
         "Data identify a network only up to its Markov equivalence class: directions within it are "
         "arbitrary. An edge is not a cause."
     )
+    if any(telling.KNOWLEDGE in condition.data for condition in facts.conditions):
+        said.append(
+            "Where knowledge is told, truth and answers are compared after it is applied to both, also to "
+            "the answers of learners that take none; directions that follow from it alone are not counted. "
+            "What you know may be wrong more often than what is told here."
+        )
     if drawn:
         said.append(
             "Conditional probability tables drawn at random carry information about the order of variables "

@@ -1,7 +1,9 @@
 """Compare a learned graph with the truth: structural Hamming distances, skeletons, directions, colliders.
 
 The learned graph L stands for its Markov equivalence class C(L): the CPDAG of a consistent extension (a
-DAG is its own). An L without one is compared as it stands. Undefined is undefined, with its reason:
+DAG is its own). An L without one is compared as it stands. Where knowledge was told, C(L) is narrowed by
+it, whether or not the learner takes knowledge: the analyst has it in any case. Arrowheads that follow
+from the knowledge alone count in no measure of directions. Undefined is undefined, with its reason:
 
 - "truth: ..." if the truth alone leaves the measure undefined, whatever was answered; this comes before
   the other two, so that a truth leaves a measure's population for every learner alike;
@@ -18,11 +20,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from generators.adjacency import Arrow, Nodes, Offsets
-from generators.classes import class_lists
+from generators.classes import class_lists, narrowed_lists
 from generators.compiled import kernel, warm_up
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.network import Network
+from harness.knowledge import Knowledge
 from harness.scorers.maps import NOT_A_DAG, map_measures
 from harness.scorers.registry import GRAPH_MEASURES
 from harness.scorers.truth import Truth
@@ -60,15 +63,17 @@ class Counts(NamedTuple):
     """What C(L) has, and how much of it C(T) has too."""
 
     edges: int
-    directed: int
+    directed: int  # without those that are settled by knowledge
     colliders: int
     shared_edges: int
     shared_marks: int  # edges with the same mark in both: ->, <- or undirected
-    shared_directed: int
+    shared_directed: int  # without those that are settled by knowledge
     shared_colliders: int
 
 
-def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float | None]:
+def score(
+    truth: Network | Graph, learned: Graph | Network, *, knowledge: Knowledge | None = None
+) -> dict[str, float | None]:
     """Return all graph measures of a learned graph against the truth.
 
     Parameters
@@ -77,6 +82,9 @@ def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float |
         A graph must be a DAG.
     learned : Graph or Network
         Over the same names, in any order. If it is a DAG, `dag_shd` takes its arcs as causal claims.
+    knowledge : Knowledge, optional
+        What was known beforehand, over the same names: both classes are narrowed by it, and directions
+        that follow from it alone are not counted.
 
     Returns
     -------
@@ -96,8 +104,9 @@ def score(truth: Network | Graph, learned: Graph | Network) -> dict[str, float |
     >>> measures["dag_shd"], measures["class_shd"], measures["skeleton_f1"], measures["direction_recall"]
     (1.0, 2.0, 1.0, None)
     """
-    graph = learned.graph if isinstance(learned, Network) else learned
-    return score_answer(Truth.of(truth), graph, directions="causal").as_mapping()
+    target, graph = (each.graph if isinstance(each, Network) else each for each in (truth, learned))
+    known = None if knowledge is None else knowledge.over(target.names)
+    return score_answer(Truth.of(target, known), graph, directions="causal").as_mapping()
 
 
 def score_answer(truth: Truth, learned: Graph, *, returns: str = "pdag", directions: str = "class") -> Scores:
@@ -128,9 +137,12 @@ def score_answer(truth: Truth, learned: Graph, *, returns: str = "pdag", directi
     if learned.names != truth.graph.names:
         learned = _reordered(learned, truth.graph.names)
     lists = class_lists(learned.arrow)
-    counts = Counts(*_count(truth.cpdag.arrow, learned.arrow, lists.at, lists.nodes).tolist())
+    at, nodes = lists.at, lists.nodes
+    if truth.known is not None and lists.is_extendable:
+        at, nodes = narrowed_lists(at, nodes, truth.known)
+    counts = Counts(*_count(truth.narrowed.arrow, truth.is_settled, learned.arrow, at, nodes).tolist())
     outcomes = _structure_measures(truth, counts)
-    outcomes |= map_measures(truth, lists, is_equivalent=outcomes["class_shd"] == 0)
+    outcomes |= map_measures(truth, lists, is_equivalent=_is_equivalent(truth, counts))
     outcomes["dag_shd"] = NOT_CAUSAL
     if directions == "causal":
         outcomes["dag_shd"] = _dag_shd(truth, learned, counts) if lists.is_dag else NOT_A_DAG
@@ -158,6 +170,7 @@ def _reordered(learned: Graph, names: tuple[str, ...]) -> Graph:
 
 def _structure_measures(truth: Truth, counts: Counts) -> dict[str, float | str]:
     shd = truth.n_edges + counts.edges - counts.shared_edges - counts.shared_marks
+    beyond = "" if truth.known is None else " beyond what was told"
     return {
         "class_shd": float(shd),
         "shd_per_arc": _ratio(shd, truth.n_edges, "truth: no arc"),
@@ -168,8 +181,12 @@ def _structure_measures(truth: Truth, counts: Counts) -> dict[str, float | str]:
         "skeleton_f1": _ratio(
             2 * counts.shared_edges, truth.n_edges + counts.edges, "answer: no edge, and the truth has none"
         ),
-        "direction_precision": _ratio(counts.shared_directed, counts.directed, "answer: no directed edge"),
-        "direction_recall": _ratio(counts.shared_directed, truth.n_compelled, "truth: no compelled arc"),
+        "direction_precision": _ratio(
+            counts.shared_directed, counts.directed, f"answer: no directed edge{beyond}"
+        ),
+        "direction_recall": _ratio(
+            counts.shared_directed, truth.n_compelled, f"truth: no compelled arc{beyond}"
+        ),
         "collider_precision": _ratio(
             counts.shared_colliders, counts.colliders, "answer: no unshielded collider"
         ),
@@ -177,6 +194,16 @@ def _structure_measures(truth: Truth, counts: Counts) -> dict[str, float | str]:
             counts.shared_colliders, truth.n_colliders, "truth: no unshielded collider"
         ),
     }
+
+
+def _is_equivalent(truth: Truth, counts: Counts) -> bool:
+    """Whether skeleton and unshielded colliders are the same (Verma and Pearl 1990).
+
+    Knowledge that is wrong narrows truth and answer differently, so that their distance does not say; but
+    it adds no unshielded collider to a class (Meek 1995).
+    """
+    has_same_edges = truth.n_edges == counts.edges == counts.shared_edges
+    return has_same_edges and truth.n_colliders == counts.colliders == counts.shared_colliders
 
 
 def _ratio(part: int, whole: int, reason: str) -> float | str:
@@ -196,13 +223,17 @@ def _withdraw_all_but_skeleton(outcomes: dict[str, float | str]) -> None:
 
 
 @kernel
-def _count(true_class: Arrow, learned: Arrow, at: Offsets, nodes: Nodes) -> NDArray[np.int64]:
+def _count(
+    true_class: Arrow, is_settled: Arrow, learned: Arrow, at: Offsets, nodes: Nodes
+) -> NDArray[np.int64]:
     """Count what `Counts` holds, in its order.
 
     Parameters
     ----------
     true_class : bool array, shape (p, p)
         C(T).
+    is_settled : bool array, shape (p, p)
+        Which arrowheads follow from knowledge alone.
     learned : bool array, shape (p, p)
         L, which has the skeleton of C(L).
     at, nodes : int64 array, shape (3 p + 1,), and uint32 array
@@ -213,10 +244,13 @@ def _count(true_class: Arrow, learned: Arrow, at: Offsets, nodes: Nodes) -> NDAr
         parents = nodes[at[3 * c] : at[3 * c + 1]]
         for k in range(parents.size):
             a = parents[k]
-            directed += 1
+            edges += 1
             shared_edges += true_class[a, c] or true_class[c, a]
             a_is_true = true_class[a, c] and not true_class[c, a]
-            shared_directed += a_is_true
+            shared_marks += a_is_true
+            if not is_settled[a, c]:
+                directed += 1
+                shared_directed += a_is_true
             for b in parents[k + 1 :]:
                 if not learned[a, b] and not learned[b, a]:
                     colliders += 1
@@ -227,8 +261,6 @@ def _count(true_class: Arrow, learned: Arrow, at: Offsets, nodes: Nodes) -> NDAr
                 edges += 1
                 shared_edges += true_class[a, c] or true_class[c, a]
                 shared_marks += true_class[a, c] and true_class[c, a]
-    edges += directed
-    shared_marks += shared_directed
     return np.array(
         [edges, directed, colliders, shared_edges, shared_marks, shared_directed, shared_colliders]
     )

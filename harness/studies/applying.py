@@ -13,10 +13,13 @@ from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
 from generators.settings import nearest
+from harness.knowledge import Knowledge
+from harness.learners.builtin import BUILT_IN, built_in
 from harness.learners.sources import load, resolve
 from harness.learners.specification import Specification, call, specification_of
 from harness.plan.expansion import n_variables
 from harness.plan.recipes import given_network
+from harness.plan.telling import KNOWLEDGE
 from harness.records import Condition, Learner
 from harness.studies.facts import StudyFacts
 
@@ -29,6 +32,7 @@ def learn(
     data: Dataset | pd.DataFrame,
     *,
     rng: np.random.Generator | None = None,
+    knowledge: Knowledge | None = None,
     **settings: Any,
 ) -> Graph:
     """Apply a learner to data.
@@ -41,6 +45,8 @@ def learn(
         Of a frame, every column is a variable and every distinct value a state; NaN is missing.
     rng : numpy.random.Generator, optional
         By default a fresh one: give one to make the answer repeatable.
+    knowledge : Knowledge, optional
+        What is known of these variables, in any order.
     **settings
         Of the learner.
 
@@ -52,7 +58,8 @@ def learn(
     Raises
     ------
     InputError
-        If there is no such method or setting, or a value is not accepted.
+        If there is no such method or setting, a value is not accepted, the method takes no knowledge, or
+        the knowledge is about other variables.
     harness.records.Declined
         If the learner cannot take the data.
     harness.learners.specification.InvalidAnswer
@@ -68,7 +75,19 @@ def learn(
     specification = find_specification(method)
     parsed = parse_settings(specification, settings)
     rows = data if isinstance(data, Dataset) else dataset_of(data)
-    return call(specification, rows, parsed, rng if rng is not None else np.random.default_rng()).graph
+    if knowledge is not None:
+        refuse_knowledge_not_taken(specification)
+        knowledge = knowledge.over(rows.names)
+    rng = rng if rng is not None else np.random.default_rng()
+    return call(specification, rows, parsed, rng, knowledge).graph
+
+
+def refuse_knowledge_not_taken(specification: Specification) -> None:
+    """Raise an InputError if a method takes no knowledge: it would be given in vain."""
+    if not specification.takes_knowledge:
+        takers = [name for name in BUILT_IN if built_in(name).takes_knowledge]
+        others = f"; built-in ones that do: {', '.join(takers)}" if takers else ""
+        raise InputError(f"{specification.name}: takes no knowledge{others}.")
 
 
 def find_specification(method: str | Callable[..., Any]) -> Specification:
@@ -144,8 +163,15 @@ def rehearsed_learner(facts: StudyFacts, label: str | None) -> tuple[Learner, Sp
     return learners[label], load(learners[label])
 
 
-def differences(facts: StudyFacts, data: Dataset) -> list[str]:
-    """Say how a real file differs from what a study rehearsed: rows, variables, states, missing cells.
+def differences(facts: StudyFacts, data: Dataset, *, has_knowledge: bool = False) -> list[str]:
+    """Say how a real study differs from the rehearsed one: rows, variables, states, gaps, knowledge.
+
+    Parameters
+    ----------
+    facts : StudyFacts
+    data : Dataset
+    has_knowledge : bool
+        Whether anything is told beside the data.
 
     Returns
     -------
@@ -164,6 +190,11 @@ def differences(facts: StudyFacts, data: Dataset) -> list[str]:
     if data.has_missing:
         share = float((data.codes == data.missing_code).mean())
         found.append(f"{share:.1%} of the file's cells are missing; none was missing in the rehearsal.")
+    was_told = {KNOWLEDGE in condition.data for condition in facts.conditions}
+    if has_knowledge and was_told == {False}:
+        found.append("Knowledge is given here; none was told in the rehearsal.")
+    if not has_knowledge and was_told == {True}:
+        found.append("No knowledge is given here; in the rehearsal some was always told.")
     return found
 
 

@@ -51,6 +51,7 @@ def _learners() -> list[Record]:
                 "reference": specification.reference,
                 "returns": specification.returns,
                 "directions": specification.directions,
+                "takes_knowledge": specification.takes_knowledge,
                 "baseline": specification.baseline,
                 "revision": specification.revision,
                 "settings": _settings(specification.settings),

@@ -15,6 +15,7 @@ from generators.classes import NO_TRIPLES, class_lists, cpdag, meek_rules, unshi
 from generators.compiled import kernel
 from generators.graph import Graph
 from generators.separation import is_connected, is_separated
+from harness.knowledge import Knowledge
 from harness.scorers.structure import score_answer
 from harness.scorers.truth import Truth
 
@@ -99,6 +100,21 @@ def test_all_measures_of_one_run(benchmark: Any, rng: np.random.Generator, p: in
     benchmark.extra_info["ratio to one dense SHD"] = benchmark.stats["median"] / median_seconds(
         dense_shd, 100
     )
+
+
+@pytest.mark.parametrize("p", [12, *SIZES])
+def test_all_measures_under_knowledge(benchmark: Any, rng: np.random.Generator, p: int) -> None:
+    """The same with three stages known, another DAG's class as the answer; beside scoring without them."""
+    graph, learned = random_dag(rng, p), cpdag(random_dag(rng, p))
+    order = [graph.names[x] for x in graph.order()]
+    knowledge = Knowledge.of(graph.names, stages=[order[: p // 3], order[p // 3 : p // 2], order[p // 2 :]])
+    without, truth = Truth.of(graph), Truth.of(graph, knowledge)
+    score_answer(truth, learned)
+
+    benchmark(score_answer, truth, learned)
+
+    yardstick = median_seconds(lambda: score_answer(without, learned), 100)
+    benchmark.extra_info["ratio to no knowledge"] = benchmark.stats["median"] / yardstick
 
 
 @pytest.mark.parametrize("p", SIZES)

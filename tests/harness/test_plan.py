@@ -332,6 +332,117 @@ def test_published_networks_are_named(folder: Path) -> None:
     assert expected_runs(plan) == 2 * 7 * 7
 
 
+def test_what_is_told_is_a_factor_of_the_data() -> None:
+    """Its levels cross with those of the networks, defaults are left out, and a short text names each."""
+    levels = "[{}, {arcs = 0.2, stages = false}, {arcs = 0, excluded = 1, stages = 3, wrong = 0.05}]"
+
+    plan = parse_plan(plan_of(networks="variables = [5, 6]", data=f"knowledge = {levels}"))
+
+    told = [{}, {"arcs": 0.2}, {"excluded": 1.0, "stages": 3, "wrong": 0.05}]
+    assert [dict(condition.data) for condition in plan.conditions] == 2 * [
+        {"knowledge": level} if level else {} for level in told
+    ]
+    assert factors(plan) == [
+        {"variables": variables, "knowledge": text}
+        for variables in (5, 6)
+        for text in ("none", "arcs 0.2", "excluded 1.0, stages 3, wrong 0.05")
+    ]
+    assert [note for note in plan.notes if "Told" in note] == [
+        "Told to learners beforehand: nothing; or 20 % of the true arcs; or 100 % of the arcs that are not "
+        "there, as excluded, stages in 3 waves, 5 % of each wrong."
+    ]
+
+
+def test_levels_of_what_is_told_that_say_the_same_are_one() -> None:
+    """Nothing told is nothing told, however it is written; one level is no factor and no key."""
+    levels = "[{}, {arcs = 0}, {stages = false}, {arcs = 0.0, wrong = 0.5}]"
+
+    plan = parse_plan(plan_of(data=f"knowledge = {levels}"))
+
+    assert [dict(condition.data) for condition in plan.conditions] == [{}]
+    assert factors(plan) == [{}]
+    assert not any("Told" in note for note in plan.notes)
+
+
+def test_a_single_table_of_what_is_told_is_no_factor() -> None:
+    """It holds in every condition."""
+    plan = parse_plan(plan_of(networks="variables = [5, 6]", data="knowledge = {stages = true}"))
+
+    assert factors(plan) == [{"variables": 5}, {"variables": 6}]
+    assert [dict(condition.data) for condition in plan.conditions] == 2 * [{"knowledge": {"stages": True}}]
+
+
+def test_what_is_told_can_come_from_a_file_beside_the_plan(folder: Path) -> None:
+    """Its statements are what counts, in one order; two files that say the same are one level."""
+    (folder / "one.toml").write_text('arcs = [["rain", "wet_grass"], ["cloudy", "rain"]]')
+    (folder / "two.toml").write_text('arcs = [["cloudy", "rain"], ["rain", "wet_grass"]]\nstages = []')
+    levels = '[{file = "one.toml"}, {file = "two.toml"}, {}]'
+
+    plan = parsed(folder, networks='published = "sprinkler"', data=f"knowledge = {levels}")
+
+    arcs = [["cloudy", "rain"], ["rain", "wet_grass"]]
+    assert [dict(condition.data) for condition in plan.conditions] == [
+        {"knowledge": {"statements": {"arcs": arcs}}},
+        {},
+    ]
+    assert factors(plan) == [{"knowledge": "file one.toml"}, {"knowledge": "none"}]
+    assert plan.notes == ("Told to learners beforehand: arcs from a file (2); or nothing.",)
+
+
+def test_what_is_told_wrong_of_a_given_network_is_noted(folder: Path) -> None:
+    """A file may be wrong, on purpose; a reader should know."""
+    (folder / "known.toml").write_text(
+        'arcs = [["cloudy", "rain"], ["rain", "sprinkler"]]\nstages = [["rain"], ["cloudy", "sprinkler"]]'
+    )
+    with pytest.raises(InputError, match=r"arcs lead from 'cloudy', which stands in stages\[2\], to 'rain'"):
+        parsed(folder, networks='published = "sprinkler"', data='knowledge = {file = "known.toml"}')
+    (folder / "known.toml").write_text(
+        'arcs = [["rain", "sprinkler"]]\nstages = [["rain"], ["cloudy", "sprinkler"]]'
+    )
+
+    plan = parsed(folder, networks='published = "sprinkler"', data='knowledge = {file = "known.toml"}')
+
+    # The true arcs are cloudy -> sprinkler, cloudy -> rain, sprinkler -> wet_grass, rain -> wet_grass.
+    assert plan.notes[0] == (
+        "what is told of sprinkler is not all true: 1 arcs are told that it has not, and 1 are excluded that "
+        "it has."
+    )
+
+
+def test_every_fault_of_a_knowledge_file_is_a_line_of_the_plan(folder: Path) -> None:
+    """What its form, its names for each network and its statements have wrong, before anything runs."""
+    given = 'published = ["sprinkler", "burglary"]'
+    (folder / "form.toml").write_text("arcs = 3\nstage = []")
+    (folder / "names.toml").write_text('arcs = [["cloudy", "rian"]]')
+
+    found = faults(
+        plan_of(
+            networks=given,
+            data='knowledge = [{file = "none.toml"}, {file = "form.toml"}, {file = "names.toml"}]',
+        ),
+        folder,
+    )
+
+    assert found == [
+        "data.knowledge[1].file: none.toml: no such file.",
+        "data.knowledge[2].file: form.toml: stage: unknown key. Did you mean 'stages'?",
+        "data.knowledge[2].file: form.toml: arcs: must be a list, got '3'.",
+        "data.knowledge[3].file: names.toml, for sprinkler: arcs[1]: 'rian' is not a variable. "
+        "Did you mean 'rain'?",
+        "data.knowledge[3].file: names.toml, for burglary: arcs[1]: 'cloudy' is not a variable.",
+        "data.knowledge[3].file: names.toml, for burglary: arcs[1]: 'rian' is not a variable.",
+    ]
+
+
+def test_too_many_levels_of_what_is_told_are_refused(folder: Path) -> None:
+    """They count with those of the networks."""
+    levels = ", ".join(f"{{arcs = {number / 1000}}}" for number in range(1, 702))
+
+    found = faults(plan_of(networks="variables = [5, 6, 7]", data=f"knowledge = [{levels}]"), folder)
+
+    assert found == ["data.knowledge: the lists cross to 2103 conditions; at most 2000 are accepted."]
+
+
 def test_what_a_cap_takes_away_is_noted() -> None:
     """12 variables, 1.5 parents each, at most 4: 17.5 of 18 arcs are left.
 
@@ -595,8 +706,27 @@ WRONG_DATA = {
     ],
     "datasets = 0": ["data.datasets: must be a whole number between 1 and 100000, got 0."],
     "dataset = 1": ["data.dataset: unknown key. Did you mean 'datasets'?"],
-    "missing = 0.1": ["data.missing: unknown key; accepted: rows, datasets."],
-    "knowledge = {arcs = 0.2}": ["data.knowledge: unknown key; accepted: rows, datasets."],
+    "missing = 0.1": ["data.missing: unknown key; accepted: rows, datasets, knowledge."],
+    "knowledge = 0.2": [
+        "data.knowledge: must be a table such as {arcs = 0.2, stages = true}, or a list of them, got 0.2."
+    ],
+    "knowledge = []": ["data.knowledge: a list must have at least one item, got []."],
+    "knowledge = [{arcs = 1.5, exclude = 0.1}, 'all', {stages = 1, wrong = -1, excluded = '1'}]": [
+        "data.knowledge[1].exclude: unknown key. Did you mean 'excluded'?",
+        "data.knowledge[1].arcs: must be a number between 0 and 1, got 1.5.",
+        "data.knowledge[2]: must be a table such as {arcs = 0.2, stages = true}, or a list of them, got "
+        "'all'.",
+        "data.knowledge[3].excluded: must be a number between 0 and 1, got '1'.",
+        "data.knowledge[3].stages: must be true, false or a whole number at least 2, got 1.",
+        "data.knowledge[3].wrong: must be a number between 0 and 1, got -1.",
+    ],
+    "knowledge = {wrong = 0.05}": [
+        "data.knowledge.wrong: is a share of what is told, and nothing is told here."
+    ],
+    "knowledge = {file = 'known.toml', arcs = 0.2}": [
+        "data.knowledge.arcs: is not for what a file says, which is told as it stands.",
+        "data.knowledge.file: is for given networks; drawn ones have variables of their own.",
+    ],
 }
 METHODS = "chance, chow-liu, hill-climbing, no-arcs, pairwise, pc"
 WRONG_LEARNERS = {
@@ -810,16 +940,18 @@ LEAVES = """\
 | 'class_shd <= 3' | '\U0001f41d' | "a\\nb" | "\\u0000" | "\\u0000.py:b" """
 KEYS = """\
 title seed networks data learner limits requirement gate variables topology cpts states
-mean_parents replicates file published rows datasets method source label vary alpha seconds memory_mb
-threads bounds assurance margin reference "\\n" """
+mean_parents replicates file published rows datasets knowledge method source label vary alpha seconds
+memory_mb threads bounds assurance margin reference "\\n" """
 TABLES = st.sampled_from(["", "[networks]", "[data]", "[[learner]]", "[limits]", "[requirement]", "[gate]"])
 VALUES = st.recursive(
     st.sampled_from([*LEAVES.split("| "), "9" * 30, "0x" + "f" * 5000]),
     lambda inner: (
         st.lists(inner, max_size=3).map(lambda items: f"[{', '.join(items)}]")
-        | st.dictionaries(st.sampled_from(["alpha", "class_shd", '""', "'a b'"]), inner, max_size=2).map(
-            lambda items: "{" + ", ".join(f"{key} = {value}" for key, value in items.items()) + "}"
-        )
+        | st.dictionaries(
+            st.sampled_from(["alpha", "class_shd", '""', "'a b'", "arcs", "stages", "wrong", "file"]),
+            inner,
+            max_size=2,
+        ).map(lambda items: "{" + ", ".join(f"{key} = {value}" for key, value in items.items()) + "}")
     ),
     max_leaves=4,
 )

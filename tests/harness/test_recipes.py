@@ -12,6 +12,7 @@ import pytest
 
 from generators.catalogue import published_network
 from generators.cpts import CPT_FAMILIES
+from generators.streams import canonical_json
 from generators.topologies import TOPOLOGIES, generate_graph
 from harness.plan.recipes import (
     dataset_key,
@@ -208,6 +209,19 @@ def test_the_view_is_that_of_the_dataset() -> None:
     assert [[2, 3, 4][j] for j in view.columns] == [len(own) for own in view.relabel]
 
 
+def test_what_is_told_is_part_of_neither_key() -> None:
+    """Networks and datasets are the same whatever is told; a plan that tells nothing has no such data."""
+    with_it = PLAN.replace("rows = [100, 200]", "rows = [100, 200]\nknowledge = {stages = true}")
+    plan, telling = parse_plan(PLAN), parse_plan(with_it)
+
+    assert network_keys(plan) == network_keys(telling)
+    assert learner_keys(plan) == learner_keys(telling)
+    assert {canonical_json(condition.data) for condition in plan.conditions} == {"{}"}
+    assert {canonical_json(condition.data) for condition in telling.conditions} == {
+        '{"knowledge":{"stages":true}}'
+    }
+
+
 def test_a_published_network_is_the_same_for_every_seed_and_replicate() -> None:
     """Its key holds its content and the plan's seed, which the datasets depend on."""
     networks = {"published": "chest-clinic"}
@@ -240,6 +254,7 @@ def test_a_file_counts_by_its_content(tmp_path: Path) -> None:
         ('title = "One"', 'title = "Two"'),
         ("rows = [100, 200]", "rows = [50, 100, 200, 400]"),
         ("rows = [100, 200]", "rows = [100, 200]\ndatasets = 5"),
+        ("rows = [100, 200]", "rows = [100, 200]\nknowledge = [{}, {arcs = 0.2, wrong = 0.1}]"),
         ("replicates = 3", "replicates = 4"),
         ("variables = [4, 6]", "variables = [6, 8, 4]"),
         ("variables = [4, 6]", 'variables = [4, 6]\ntopology = ["uniform", "random-order"]'),

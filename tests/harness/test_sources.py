@@ -10,6 +10,7 @@ import pytest
 
 from generators.dataset import Dataset
 from generators.errors import InputError
+from harness.knowledge import Knowledge
 from harness.learners.builtin import BUILT_IN, built_in
 from harness.learners.sources import folder_of, load, needs_isolation, own_folder, resolve
 from harness.learners.specification import call
@@ -87,6 +88,28 @@ def test_a_file_gives_a_learner_that_can_be_called(tmp_path: Path) -> None:
     assert list(found.specification.settings) == ["alpha"]
     assert found.method == "own.py:learn"
     assert f"{tmp_path / 'own.py'}:learn" == found.source
+
+
+def test_knowledge_is_handed_to_learners_that_take_it(tmp_path: Path) -> None:
+    """It is an argument of its own, no setting; a learner without it is called as ever."""
+    taking = (
+        "from generators.graph import Graph\n"
+        "def learn(data, *, alpha: float = 0.05, knowledge):\n"
+        "    if knowledge is None:\n"
+        "        return Graph.from_edges(data.names)\n"
+        "    return Graph(data.names, knowledge.arcs)\n"
+    )
+    write(tmp_path, own=SOUND, taking=taking)
+    known = Knowledge.of(DATA.names, arcs=[("b", "a")])
+    rng = np.random.default_rng(1)
+
+    takes, other = (resolve(None, f"{name}.py:learn", tmp_path).specification for name in ("taking", "own"))
+
+    assert (takes.takes_knowledge, other.takes_knowledge) == (True, False)
+    assert list(takes.settings) == ["alpha"]
+    assert call(takes, DATA, {}, rng, known).graph.edges() == (("b", "a", "directed"),)
+    assert call(takes, DATA, {}, rng).graph.edges() == ()
+    assert call(other, DATA, {}, rng, known).graph.edges() == (("a", "b", "directed"),)
 
 
 def test_a_path_is_relative_to_the_given_folder(tmp_path: Path) -> None:
@@ -253,6 +276,11 @@ def test_what_a_file_prints_goes_to_standard_error(
         (
             "def learn(data, depth, *, alpha=0.1, rng): pass\n",
             "'learn' in own.py cannot be called as learn(data, alpha=..., rng=...): "
+            "missing a required argument: 'depth'",
+        ),
+        (
+            "def learn(data, depth, *, knowledge): pass\n",
+            "'learn' in own.py cannot be called as learn(data, knowledge=...): "
             "missing a required argument: 'depth'",
         ),
         (
