@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 import time
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -55,16 +55,51 @@ def _shrunk(data: Dataset, failure: Failed, fact: Fact, least_rows: int) -> Fail
     """Return the failure of the same kind on the smallest input found, greedily."""
     end = time.monotonic() + MAX_SECONDS
     n_trials = 0
-    candidates = _smaller(data, least_rows)
-    while (candidate := next(candidates, None)) is not None:
+
+    def still_fails(candidate: Dataset) -> bool:
+        nonlocal failure, n_trials
+        if n_trials == MAX_TRIALS or time.monotonic() > end:
+            return False
         n_trials += 1
-        if n_trials > MAX_TRIALS or time.monotonic() > end:
-            break
         found = _failure_on(candidate, fact)
-        if found is not None and _kind(found) == _kind(failure):
-            failure = found
-            candidates = _smaller(candidate, least_rows)
+        if found is None or _kind(found) != _kind(failure):
+            return False
+        failure = found
+        return True
+
+    before = None
+    while before is not data:
+        before = data
+        data = _with_fewer_columns(data, still_fails)
+        data = _with_fewer_rows(data, least_rows, still_fails)
     return failure
+
+
+def _with_fewer_columns(data: Dataset, still_fails: Callable[[Dataset], bool]) -> Dataset:
+    # Without a half of them, without a quarter, ..., without one.
+    chunk = data.n_variables // 2
+    while chunk:
+        start = 0
+        while start < data.n_variables > chunk:
+            left = np.delete(np.arange(data.n_variables), slice(start, start + chunk))
+            candidate = _part(data, slice(None), left)
+            if still_fails(candidate):
+                data = candidate
+            else:
+                start += chunk
+        chunk //= 2
+    return data
+
+
+def _with_fewer_rows(data: Dataset, least_rows: int, still_fails: Callable[[Dataset], bool]) -> Dataset:
+    columns = np.arange(data.n_variables)
+    while (half := data.n_rows // 2) >= least_rows:
+        halves = (_part(data, rows, columns) for rows in (slice(half), slice(half, None)))
+        smaller = next((candidate for candidate in halves if still_fails(candidate)), None)
+        if smaller is None:
+            break
+        data = smaller
+    return data
 
 
 def _failure_on(data: Dataset, fact: Fact) -> Failed | None:
@@ -81,26 +116,10 @@ def _kind(failure: Failed) -> str:
     return re.split("[:;]", str(failure))[0]
 
 
-def _smaller(data: Dataset, least_rows: int) -> Iterator[Dataset]:
-    # The halves of the rows, then without a half of the columns, a quarter, ..., one.
-    n, p = data.n_rows, data.n_variables
-    rows, columns = np.arange(n), np.arange(p)
-    if n // 2 >= least_rows:
-        yield _part(data, rows[: n // 2], columns)
-        yield _part(data, rows[n // 2 :], columns)
-    chunk = p // 2
-    while chunk:
-        for start in range(0, p, chunk):
-            left = np.delete(columns, slice(start, start + chunk))
-            if len(left):
-                yield _part(data, rows, left)
-        chunk //= 2
-
-
-def _part(data: Dataset, rows: NDArray[np.int64], columns: NDArray[np.int64]) -> Dataset:
+def _part(data: Dataset, rows: slice, columns: NDArray[np.int64]) -> Dataset:
     places = columns.tolist()
     return Dataset.trusted(
         tuple(data.names[j] for j in places),
         tuple(data.states[j] for j in places),
-        np.asfortranarray(data.codes[np.ix_(rows, columns)]),
+        np.array(data.codes[rows, columns], order="F"),
     )
