@@ -92,8 +92,8 @@ def run_checks(
     function waiting. Those of processes, and the one of 200 variables, fork.
     """
     names = list(only) or list(CHECKS)
-    _refuse_unknown("check", names)
-    _refuse_unknown(f"learner {specification.name!r}: exempt: check", specification.exempt)
+    _refuse_unknown(names)
+    _refuse_unknown(specification.exempt, f"learner {specification.name!r}: exempt: ")
     return (run_check(name, specification, settings) for name in names)
 
 
@@ -114,8 +114,8 @@ def run_check(
     InputError
         If the name, or one in the learner's exemptions, is not that of a check.
     """
-    _refuse_unknown("check", [name])
-    _refuse_unknown(f"learner {specification.name!r}: exempt: check", specification.exempt)
+    _refuse_unknown([name])
+    _refuse_unknown(specification.exempt, f"learner {specification.name!r}: exempt: ")
     began = time.perf_counter()
     result, reason = Result.PASSED, ""
     calls: tuple[LearnerCall, ...] = ()
@@ -130,11 +130,11 @@ def run_check(
     return CheckRecord(name, fact_of(name), result, _sentence(reason), calls, time.perf_counter() - began)
 
 
-def _refuse_unknown(place: str, names: Iterable[str]) -> None:
+def _refuse_unknown(names: Iterable[str], place: str = "") -> None:
     for name in names:
         if name not in CHECKS:
-            hint = nearest(name, CHECKS)
-            raise InputError(f"{place} {name!r} is unknown; accepted: {', '.join(sorted(CHECKS))}.{hint}")
+            accepted = ", ".join(sorted(CHECKS))
+            raise InputError(f"{place}unknown check {name!r}; accepted: {accepted}.{nearest(name, CHECKS)}")
 
 
 def _sentence(text: str) -> str:

@@ -264,6 +264,7 @@ def _serve(job: Callable[[], object], rehearsal: Callable[[], object] | None) ->
         # Whatever the caller has made of its streams: here they are the open files 1 and 2.
         sys.stdout, sys.stderr = open(1, "w", closefd=False), open(2, "w", closefd=False)  # noqa: SIM115
         streams = sys.stdout, sys.stderr
+        warnings.showwarning = _show_warning
         environment = {**os.environ, "TMPDIR": os.getcwd()}
         tempfile.tempdir = os.getcwd()
         if rehearsal is not None:
@@ -295,6 +296,18 @@ def _settle(environment: dict[str, str]) -> None:
     warnings.resetwarnings()
     for category in IGNORED_WARNINGS:
         warnings.simplefilter("ignore", category)
+
+
+def _show_warning(
+    message: Warning | str,
+    category: type[Warning],
+    filename: str,
+    lineno: int,
+    file: TextIO | None = None,
+    line: str | None = None,
+) -> None:
+    # A caller such as pytest may record warnings; here they are written where Python itself writes them.
+    (file or sys.stderr).write(warnings.formatwarning(message, category, filename, lineno, line))
 
 
 def _flush(streams: tuple[TextIO, ...]) -> None:
