@@ -36,7 +36,7 @@ from harness.records import Limits, Status
 TELLS_THREADS = os.path.isdir("/proc/self/task")
 GRACE_SECONDS = 1.0  # for what is asked to end, and for children that end by themselves
 LOOK_SECONDS = 0.005
-LOADING_SECONDS = 120.0  # for a rehearsal
+LOADING_SECONDS = 60.0  # for a rehearsal
 # Those that Python itself does not show (documentation of the module warnings).
 IGNORED_WARNINGS = (DeprecationWarning, PendingDeprecationWarning, ImportWarning, ResourceWarning)
 _POOL_SIDE = 256  # of matrices whose product a linear algebra library shares among its threads

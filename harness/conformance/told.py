@@ -18,13 +18,12 @@ from harness.records import Declined
 
 def check_told_knowledge(subject: Subject) -> None:
     """Arcs that are told are in the answer, and arcs that are excluded are not."""
-    # Undirected is accepted for an arc that is told, and where one of two directions is excluded.
     if not getattr(subject.specification, "takes_knowledge", False):
         raise Skipped("it takes no knowledge")
     for data, knowledge in _told():
         asked = subject.asked(data, knowledge)
         try:
-            fault = _fault(learn(subject, data, knowledge).graph, knowledge)
+            fault = contradiction(learn(subject, data, knowledge).graph, knowledge)
         except Declined as refusal:
             raise Failed(f"it declined what it was told: {refusal}", asked) from refusal
         if fault:
@@ -51,7 +50,19 @@ def _told() -> Iterator[tuple[Dataset, Knowledge]]:
         yield data, Knowledge.of(names, arcs=[(names[-1], names[0])], excluded=[(names[0], names[1])])
 
 
-def _fault(graph: Graph, knowledge: Knowledge) -> str | None:
+def contradiction(graph: Graph, knowledge: Knowledge) -> str | None:
+    """Say which statement an answer contradicts, or return None.
+
+    An undirected edge contradicts neither an arc that was told nor the exclusion of one direction.
+
+    Examples
+    --------
+    >>> knowledge = Knowledge.of("abc", arcs=[("a", "b")], excluded=[("a", "c")])
+    >>> contradiction(Graph.from_edges("abc", directed=[("a", "b"), ("c", "a")]), knowledge)
+    >>> contradiction(Graph.from_edges("abc", undirected=[("a", "b"), ("a", "c")]), knowledge)
+    >>> contradiction(Graph.from_edges("abc", directed=[("b", "a")]), knowledge)
+    'an arc that was told has the other direction: a -> b'
+    """
     directed, skeleton = graph.directed, graph.skeleton
     arcs, excluded = knowledge.arcs, knowledge.excluded
     faults = {
