@@ -26,6 +26,7 @@ RANKS = {
     "harness.ledger": 6,
     "harness.execution": 7,
     "harness.analysis": 7,
+    "harness.conformance": 8,
     "harness.studies": 9,
     "harness.report": 10,
     "harness.cli": 11,

@@ -12,7 +12,16 @@ from generators.settings import Between
 from harness.learners.specification import learner
 
 
-@learner("no-arcs", returns="dag", reference="baseline: nothing is related", baseline=True)
+@learner(
+    "no-arcs",
+    returns="dag",
+    reference="baseline: nothing is related",
+    baseline=True,
+    exempt={
+        "strong-pair": "A baseline that says of all variables that they are unrelated.",
+        "v-structure": "A baseline that says of all variables that they are unrelated.",
+    },
+)
 def no_arcs(data: Dataset) -> Graph:
     """Return the graph without arcs.
 
@@ -33,7 +42,18 @@ def no_arcs(data: Dataset) -> Graph:
     return Graph.from_edges(data.names)
 
 
-@learner("chance", returns="dag", reference="baseline: random arcs", baseline=True)
+@learner(
+    "chance",
+    returns="dag",
+    reference="baseline: random arcs",
+    baseline=True,
+    exempt={
+        "permuted-columns": "A baseline that draws arcs between places, whatever column stands there.",
+        "independent-columns": "A baseline that draws arcs without looking at the data.",
+        "strong-pair": "A baseline that draws arcs without looking at the data.",
+        "v-structure": "A baseline that draws arcs without looking at the data.",
+    },
+)
 def chance(
     data: Dataset, *, mean_parents: Annotated[float, Between(0)] = 1.5, rng: np.random.Generator
 ) -> Graph:

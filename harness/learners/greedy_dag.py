@@ -74,6 +74,9 @@ NONE, ADD, DELETE, REVERSE = range(4)
     returns="dag",
     directions="class",
     reference="Heckerman, Geiger and Chickering 1995",
+    exempt={
+        "permuted-columns": "Of equally good moves the first in the order of the columns is made.",
+    },
 )
 def hill_climbing(
     data: Dataset,

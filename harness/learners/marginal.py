@@ -52,7 +52,15 @@ def pairwise(
     return Graph(data.names, dependent_pairs(pair_statistics(columns, test), columns.cardinalities, alpha))
 
 
-@learner("chow-liu", returns="pdag", reference="Chow and Liu 1968")
+@learner(
+    "chow-liu",
+    returns="pdag",
+    reference="Chow and Liu 1968",
+    exempt={
+        "independent-columns": "The published tree spans all variables, also where there is no information.",
+        "v-structure": "The edges of a tree are undirected: no variable has two parents.",
+    },
+)
 def chow_liu(data: Dataset) -> Graph:
     """Return the tree with the greatest sum of mutual informations.
 

@@ -555,11 +555,3 @@ class TestEdgeCases:
         graph = pc(dataset_of(codes, sizes))
 
         assert graph.n_variables == 200
-
-    def test_data_unchanged(self, rng: np.random.Generator) -> None:
-        """The same data give the same answer again, and are left as they were."""
-        data = random_network(8, rng, mean_parents=2, concentration=1).sample(300, rng=rng)
-        before = data.codes.copy()
-
-        assert pc(data) == pc(data)
-        assert np.array_equal(before, data.codes)

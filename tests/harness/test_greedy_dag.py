@@ -17,7 +17,6 @@ from scipy.stats import binomtest
 
 from generators.dataset import Dataset, code_dtype
 from generators.errors import InputError
-from generators.graph import Graph
 from generators.topologies.random_order import draw_along_random_order
 from harness.family_scores import Score, family_score, network_score
 from harness.learners.greedy_dag import hill_climbing, megabytes, tie_width
@@ -475,15 +474,3 @@ def test_answers_change_only_with_the_revision(score: Score, arcs: str) -> None:
 
     assert specification_of(hill_climbing).revision == 1
     assert arcs == " ".join(f"{source[1]}{target[1]}" for source, target, _ in graph.edges())
-
-
-def test_the_input_is_left_as_it_was() -> None:
-    """A search changes neither codes nor names, and the answer is over the same names."""
-    data = draw_data([2, 3, 2], 100, np.random.default_rng(26))
-    codes = data.codes.copy()
-
-    graph = hill_climbing(data, restarts=2, rng=unused_rng())
-
-    assert np.array_equal(codes, data.codes)
-    assert data.names == graph.names
-    assert isinstance(graph, Graph)
