@@ -125,4 +125,4 @@ def deviates_beyond(statistic: float, critical: float, df: float) -> float:
     df : float
         Above 0.
     """
-    return math.sqrt(4.5 * df) * ((statistic / df) ** (1 / 3) - (critical / df) ** (1 / 3))
+    return float(math.sqrt(4.5 * df) * ((statistic / df) ** (1 / 3) - (critical / df) ** (1 / 3)))

@@ -132,11 +132,12 @@ def deal_out(
         By how many standard deviations of the deals G2 exceeds their mean, where all were drawn.
     """
     x, y = min(x, y), max(x, y)
+    ordered = _in_order(given)
     work.parts[:] = 0
-    of_y, group_ends, stratum_ends = _by_stratum(columns, given, x, y, work.space)
+    of_y, group_ends, stratum_ends = _by_stratum(columns, ordered, x, y, work.space)
     m = of_y.shape[0]
     key = np.empty(2, dtype=np.uint64)
-    key[0], key[1] = draws.seed, _label(given, x, y)
+    key[0], key[1] = draws.seed, _label(ordered, x, y)
     words = np.empty((4, (m + 3) // 4), dtype=np.uint64)
     flat = words.reshape(words.size)
     rows = np.zeros(columns.cardinalities[y], dtype=np.uint32)
@@ -233,11 +234,24 @@ def _sum_x_log_x(
 
 
 @inlined
+def _in_order(given: NDArray[np.int64]) -> NDArray[np.int64]:
+    # By insertion: there are few, and numba's sort takes seconds to compile.
+    ordered = np.empty_like(given)
+    for i in range(given.shape[0]):
+        j = i
+        while j > 0 and ordered[j - 1] > given[i]:
+            ordered[j] = ordered[j - 1]
+            j -= 1
+        ordered[j] = given[i]
+    return ordered
+
+
+@inlined
 def _label(given: NDArray[np.int64], x: int, y: int) -> np.uint64:
-    # A number for the question; the order of the conditioning variables is of no account.
+    # A number for the question.
     label = _scrambled(np.uint64(x) << np.uint64(32) | np.uint64(y))
     for v in given:
-        label += _scrambled(np.uint64(v) + np.uint64(1) << np.uint64(48))
+        label = _scrambled(label + np.uint64(v) + np.uint64(1))
     return label
 
 

@@ -41,6 +41,9 @@ from harness.learners.specification import learner
     returns="dag",
     directions="class",
     reference="Tsamardinos, Brown and Aliferis 2006",
+    exempt={
+        "permuted-columns": "Of equally good moves the first in the order of the columns is made.",
+    },
 )
 def mmhc(
     data: Dataset,

@@ -7,7 +7,6 @@ What is checked against is the bad learner itself, whose fault is known, and sci
 from __future__ import annotations
 
 import hashlib
-import inspect
 import itertools
 import os
 import random
@@ -43,7 +42,7 @@ from harness.conformance.traces import TIGHT
 from harness.knowledge import Knowledge
 from harness.learners.builtin import BUILT_IN, built_in
 from harness.learners.marginal import pairwise
-from harness.learners.specification import call, learner, specification_of
+from harness.learners.specification import learner, specification_of
 from harness.records import Answer, Declined, Limits
 
 
@@ -730,9 +729,6 @@ def cannot_be_told(data: Dataset, *, knowledge: Knowledge | None = None) -> Grap
     return pairwise(data)
 
 
-@pytest.mark.skipif(
-    "knowledge" not in inspect.signature(call).parameters, reason="learners are not told anything yet"
-)
 class TestToldKnowledge:
     """`told-knowledge`."""
 
