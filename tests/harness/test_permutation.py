@@ -162,7 +162,7 @@ class TestInLearners:
         n_joined = 0
         for seed in range(200):
             hidden = rng.integers(0, 2, (40, 1))
-            codes = np.where(rng.random((40, 2)) < 0.75, rng.integers(0, 2, (40, 2)), hidden)
+            codes = np.where(rng.random((40, 2)) < 0.5, rng.integers(0, 2, (40, 2)), hidden)
             data = dataset_of(codes, [2, 2])
             draw = np.random.default_rng
             value = permutation_p_value(prepare(data), 0, 1, n=99, rng=draw(seed))
