@@ -51,6 +51,7 @@ def mmhc(
     alpha: Annotated[float, Between(0, 1, inside=True)] = 0.05,
     test: Test = "g2",
     permutations: Annotated[int, Between(1)] = 999,
+    min_per_cell: Annotated[float, Between(0)] = 5.0,
     max_conditioning: Annotated[int, Between(0)] | None = None,
     score: Score = "bic",
     ess: Annotated[float, Between(0, inside=True)] = 1.0,
@@ -66,6 +67,9 @@ def mmhc(
         Without missing cells.
     alpha, test, permutations, max_conditioning
         Of the tests; see `harness.learners.constraint.pc`.
+    min_per_cell : float
+        A test of a pair given others that has fewer rows than this per cell of its nominal table is not
+        made, and explains nothing. 5 as published (from memory).
     score, ess, max_parents
         Of the search; see `harness.learners.greedy_dag.hill_climbing`.
     knowledge : Knowledge, optional
@@ -94,7 +98,12 @@ def mmhc(
     (('a', 'c', 'directed'), ('b', 'c', 'directed'))
     """
     evidence = data_tests(data, alpha=alpha, test=test, permutations=permutations, rng=rng)
-    permitted = find_candidates(evidence, knowledge=knowledge, max_conditioning=max_conditioning)
+    permitted = find_candidates(
+        evidence,
+        knowledge=knowledge,
+        max_conditioning=max_conditioning,
+        max_cells=data.n_rows / min_per_cell if min_per_cell > 0 else np.inf,
+    )
     required = np.zeros_like(permitted)
     if knowledge is not None:
         permitted &= ~knowledge.excluded
@@ -111,7 +120,11 @@ def mmhc(
 
 
 def find_candidates(
-    evidence: Evidence, *, knowledge: Knowledge | None = None, max_conditioning: int | None = None
+    evidence: Evidence,
+    *,
+    knowledge: Knowledge | None = None,
+    max_conditioning: int | None = None,
+    max_cells: float = np.inf,
 ) -> NDArray[np.bool_]:
     """Find the pairs of variables that may be adjacent.
 
@@ -126,6 +139,8 @@ def find_candidates(
         are none.
     max_conditioning : int, optional
         The greatest number of variables conditioned on.
+    max_cells : float
+        Tests given others whose nominal table has more cells than this are not made.
 
     Returns
     -------
@@ -139,14 +154,14 @@ def find_candidates(
         is_told = knowledge.arcs | knowledge.arcs.T
         dependent &= ~(knowledge.excluded & knowledge.excluded.T)
     neighbours = _grow_and_shrink(
-        evidence, dependent, is_told, p if max_conditioning is None else max_conditioning
+        evidence, dependent, is_told, p if max_conditioning is None else max_conditioning, max_cells
     )
     return neighbours & neighbours.T
 
 
 @kernel
 def _grow_and_shrink(
-    evidence: Evidence, dependent: NDArray[np.bool_], is_told: NDArray[np.bool_], most: int
+    evidence: Evidence, dependent: NDArray[np.bool_], is_told: NDArray[np.bool_], most: int, max_cells: float
 ) -> NDArray[np.bool_]:
     # [x, y]: y is among the neighbours of x, as far as x can tell.
     p = dependent.shape[0]
@@ -165,17 +180,17 @@ def _grow_and_shrink(
             elif dependent[x, y]:
                 least[y] = association(evidence, nothing, x, y)
         for k in range(1, n + 1):
-            _lower(evidence, x, neighbours[:k], most, least)
+            _lower(evidence, x, neighbours[:k], most, max_cells, least)
         best = _greatest(least)
         while best >= 0:
             least[best] = 0.0
             neighbours[n] = best
             n += 1
-            _lower(evidence, x, neighbours[:n], most, least)
+            _lower(evidence, x, neighbours[:n], most, max_cells, least)
             best = _greatest(least)
         for k in range(n - 1, -1, -1):
             y = neighbours[k]
-            if not is_told[x, y] and _is_explained(evidence, x, k, neighbours[:n], most):
+            if not is_told[x, y] and _is_explained(evidence, x, k, neighbours[:n], most, max_cells):
                 for j in range(k, n - 1):
                     neighbours[j] = neighbours[j + 1]
                 n -= 1
@@ -195,7 +210,12 @@ def _greatest(least: NDArray[np.float64]) -> int:
 
 @inlined
 def _lower(
-    evidence: Evidence, x: int, neighbours: NDArray[np.int64], most: int, least: NDArray[np.float64]
+    evidence: Evidence,
+    x: int,
+    neighbours: NDArray[np.int64],
+    most: int,
+    max_cells: float,
+    least: NDArray[np.float64],
 ) -> None:
     # Takes in the associations given all sets of the neighbours that the last of them is in.
     last = neighbours.shape[0] - 1
@@ -210,15 +230,26 @@ def _lower(
             for j in range(size):
                 given[j] = neighbours[chosen[j]]
             set_base(evidence)
+            cells = _cells(evidence.cardinalities, x, given)
             for y in range(least.shape[0]):
-                if least[y] > 0:
+                if least[y] > 0 and cells * evidence.cardinalities[y] <= max_cells:
                     least[y] = min(least[y], association(evidence, given, x, y))
                     n_left -= least[y] == 0
             changed = next_combination(chosen, size - 1, last)
 
 
 @inlined
-def _is_explained(evidence: Evidence, x: int, k: int, neighbours: NDArray[np.int64], most: int) -> bool:
+def _cells(sizes: NDArray[np.int64], x: int, given: NDArray[np.int64]) -> float:
+    cells = np.float64(sizes[x])
+    for v in given:
+        cells *= sizes[v]
+    return cells
+
+
+@inlined
+def _is_explained(
+    evidence: Evidence, x: int, k: int, neighbours: NDArray[np.int64], most: int, max_cells: float
+) -> bool:
     # Whether some set of the other neighbours makes the k-th of them and x independent. Sets of those that
     # came before it did not, when it entered; so only sets with one that came later are tried.
     n = neighbours.shape[0]
@@ -233,7 +264,8 @@ def _is_explained(evidence: Evidence, x: int, k: int, neighbours: NDArray[np.int
             for j in range(size):
                 given[j] = others[chosen[j]]
             set_base(evidence)
-            if not is_dependent(evidence, given, x, neighbours[k], 0.0):
+            cells = _cells(evidence.cardinalities, x, given) * evidence.cardinalities[neighbours[k]]
+            if cells <= max_cells and not is_dependent(evidence, given, x, neighbours[k], 0.0):
                 return True
             changed = next_combination(chosen, size - 1, n - 1)
     return False

@@ -30,8 +30,10 @@ def random_dataset(seed: int) -> Dataset:
 class PlainCandidates:
     """MMPC in plain Python, with numpy tables and scipy quantiles."""
 
-    def __init__(self, data: Dataset, alpha: float, most: int, knowledge: Knowledge) -> None:
-        self.columns, self.alpha, self.most = prepare(data), alpha, most
+    def __init__(
+        self, data: Dataset, alpha: float, most: int, max_cells: float, knowledge: Knowledge
+    ) -> None:
+        self.columns, self.alpha, self.most, self.max_cells = prepare(data), alpha, most, max_cells
         self.told = knowledge.arcs | knowledge.arcs.T
         self.absent = knowledge.excluded & knowledge.excluded.T
 
@@ -45,7 +47,10 @@ class PlainCandidates:
 
     def least(self, x: int, y: int, others: list[int]) -> float:
         sets = [s for k in range(min(len(others), self.most) + 1) for s in combinations(others, k)]
-        return min(self.association(x, y, s) for s in sets)
+        sizes = self.columns.cardinalities
+        return min(
+            self.association(x, y, s) for s in sets if not s or sizes[[x, y, *s]].prod() <= self.max_cells
+        )
 
     def of(self, x: int) -> set[int]:
         p = len(self.columns.cardinalities)
@@ -65,9 +70,11 @@ class PlainCandidates:
         return set(near)
 
 
-@pytest.mark.parametrize(("alpha", "most"), [(0.05, 9), (0.3, 9), (0.2, 1)])
+@pytest.mark.parametrize(
+    ("alpha", "most", "min_per_cell"), [(0.05, 9, 0), (0.3, 9, 0), (0.2, 1, 0), (0.2, 9, 10)]
+)
 @pytest.mark.parametrize("is_told", [False, True])
-def test_candidates_are_the_plain_ones(alpha: float, most: int, is_told: bool) -> None:
+def test_candidates_are_the_plain_ones(alpha: float, most: int, min_per_cell: float, is_told: bool) -> None:
     """The compiled candidates are those of the stated rules."""
     n_one_sided = 0
     for seed in range(40):
@@ -78,19 +85,26 @@ def test_candidates_are_the_plain_ones(alpha: float, most: int, is_told: bool) -
             arcs=[(names[0], names[1])] if is_told else [],
             excluded=[(names[2], names[3]), (names[3], names[2]), (names[4], names[0])] if is_told else [],
         )
-        plain = PlainCandidates(data, alpha, most, knowledge)
+        max_cells = data.n_rows / min_per_cell if min_per_cell else math.inf
+        plain = PlainCandidates(data, alpha, most, max_cells, knowledge)
         sides = [plain.of(x) for x in range(data.n_variables)]
 
         found = find_candidates(
             data_tests(data, alpha=alpha),
             knowledge=knowledge if is_told else None,
             max_conditioning=None if most == 9 else most,
+            max_cells=max_cells,
         )
 
         expected = [[y in side and x in sides[y] for y in range(len(sides))] for x, side in enumerate(sides)]
         assert np.array_equal(expected, found)
         n_one_sided += sum(y in side and x not in sides[y] for x, side in enumerate(sides) for y in side)
     assert n_one_sided > 0 or alpha < 0.1
+
+
+def candidates_at_defaults(data: Dataset, knowledge: Knowledge | None = None) -> np.ndarray:
+    """Find the candidates with the default settings of mmhc."""
+    return find_candidates(data_tests(data, alpha=0.05), knowledge=knowledge, max_cells=data.n_rows / 5)
 
 
 def test_search_keeps_to_candidates() -> None:
@@ -102,8 +116,8 @@ def test_search_keeps_to_candidates() -> None:
 
         free, bound = mmhc(data), mmhc(data, knowledge=known)
 
-        candidates = find_candidates(data_tests(data, alpha=0.05), knowledge=known)
-        assert not (free.skeleton & ~find_candidates(data_tests(data, alpha=0.05))).any()
+        candidates = candidates_at_defaults(data, known)
+        assert not (free.skeleton & ~candidates_at_defaults(data)).any()
         assert not (bound.skeleton & ~candidates).any()
         assert bound.arrow[1, 0]
         assert not (bound.arrow & known.excluded).any()
@@ -116,6 +130,6 @@ def test_dense_candidates_leave_plain_search() -> None:
     hidden = rng.integers(0, 2, (4000, 1))
     codes = np.where(rng.random((4000, 5)) < 0.4, rng.integers(0, 2, (4000, 5)), hidden).astype(np.uint8)
     data = Dataset(tuple("abcde"), (("0", "1"),) * 5, codes)
-    assert find_candidates(data_tests(data, alpha=0.05)).sum() == 20
+    assert candidates_at_defaults(data).sum() == 20
 
     assert hill_climbing(data, rng=rng) == mmhc(data)
