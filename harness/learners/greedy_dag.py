@@ -249,7 +249,7 @@ def climb(
     [[1, 0]]
     """
     p, n = columns.codes.shape
-    most = int(required.sum(axis=0).max(initial=0))
+    most = int(np.bincount(np.flatnonzero(required) % p, minlength=1).max())
     if most > max_parents:
         raise Declined(f"{most} parents of one variable are known; at most {max_parents} are allowed")
     rule, space = scoring(columns, score, ess), workspace(columns)
@@ -338,11 +338,11 @@ class Search(NamedTuple):
 
 def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
     p = len(permitted)
-    into = np.ascontiguousarray((permitted | required).T)
-    into.flat[:: p + 1] = False
-    first = np.zeros(p + 1, dtype=np.int64)
-    np.cumsum(into.sum(axis=1), out=first[1:])
-    sources = np.nonzero(into)[1].astype(np.uint32)
+    allowed = permitted | required
+    allowed.flat[:: p + 1] = False
+    arcs = np.flatnonzero(allowed)
+    first, sources = np.zeros(p + 1, dtype=np.int64), np.empty(len(arcs), dtype=np.uint32)
+    _sort_by_target(arcs, first, sources)
     return Search(
         first,
         sources,
@@ -359,6 +359,33 @@ def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
         np.empty(p),
         np.empty((p, -(-p // WORD_ROWS)), dtype=np.uint64),
     )
+
+
+@kernel
+def _sort_by_target(
+    arcs: NDArray[np.int64], first: NDArray[np.int64], sources: NDArray[np.uint32]
+) -> None:
+    # Of arcs p x + y, ascending: fills `sources` target by target, and `first`, which comes zeroed, with
+    # where each target's begin. (A counting sort; transposing a large matrix takes longer.)
+    p = first.shape[0] - 1
+    for fills in (False, True):
+        x, end = 0, p
+        for a in range(arcs.shape[0]):
+            while arcs[a] >= end:
+                x += 1
+                end += p
+            y = arcs[a] - (end - p)
+            if fills:
+                sources[first[y]] = x
+                first[y] += 1
+            else:
+                first[y + 1] += 1
+        if not fills:
+            for y in range(p):
+                first[y + 1] += first[y]
+    for y in range(p, 0, -1):  # each has moved on to the next one's beginning
+        first[y] = first[y - 1]
+    first[0] = 0
 
 
 @kernel
@@ -615,7 +642,7 @@ def _score_changes(
     start, end, k = first[y], first[y + 1], state.n_parents[y]
     parents = state.parents[y, :k]
     has_room = k < state.parents.shape[1]
-    for a in range(start, end):
+    for a in range(start, end):  # what stays NaN is scored
         gains[a] = alone[a] if k == 0 else np.nan if has_room else -np.inf
     for j in range(k):
         gains[_place(first, sources, parents[j], y)] = -np.inf
