@@ -636,7 +636,8 @@ def _trace_paths(state: Search, before: NDArray[np.uint64]) -> None:
 def _score_changes(
     columns: Columns, rule: Scoring, is_equivalent: bool, y: int, state: Search, space: Workspace
 ) -> None:
-    # Scores y's family and the gain of every change to it.
+    # Scores y's family and the gain of every change to it. (One function, for each level of calls above
+    # the counting kernels adds seconds to the compilation.)
     first, sources, alone, gains = state.first, state.sources, state.alone, state.gains
     start, end, k = first[y], first[y + 1], state.n_parents[y]
     parents = state.parents[y, :k]
@@ -645,8 +646,20 @@ def _score_changes(
         gains[a] = alone[a] if k == 0 else np.nan if has_room else -np.inf
     for j in range(k):
         gains[_place(first, sources, parents[j], y)] = -np.inf
-    own = _score_additions(columns, rule, parents, y, sources[start:end], gains[start:end], space)
+
+    r = columns.cardinalities[y]
+    n_planes = split_planes(columns, parents, y, space) * r
+    if n_planes > 0:
+        q = joint_states(columns, parents)
+        own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
+        _score_on_planes(
+            columns, rule, parents, y, sources[start:end], gains[start:end], n_planes, own, space
+        )
+    else:
+        own = score_family(columns, parents, y, rule, space)
+    _score_by_index(columns, rule, parents, y, sources[start:end], gains[start:end], own, space)
     state.scores[y] = own
+
     if k == 0:
         for a in range(start, end):
             if np.isnan(alone[a]):
@@ -663,29 +676,6 @@ def _score_changes(
             for i in range(k - 1):
                 others[i] = parents[i if i < j else i + 1]
             state.losses[y, j] = score_family(columns, others, y, rule, space) - own
-
-
-@inlined
-def _score_additions(
-    columns: Columns,
-    rule: Scoring,
-    parents: NDArray[np.int64],
-    y: int,
-    sources: NDArray[np.uint32],
-    gains: NDArray[np.float64],
-    space: Workspace,
-) -> float:
-    # Fills the gain of each source that is NaN, and returns the score of y with its parents alone.
-    r = columns.cardinalities[y]
-    n_planes = split_planes(columns, parents, y, space) * r
-    if n_planes > 0:
-        q = joint_states(columns, parents)
-        own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
-        _score_on_planes(columns, rule, parents, y, sources, gains, n_planes, own, space)
-    else:
-        own = score_family(columns, parents, y, rule, space)
-    _score_by_index(columns, rule, parents, y, sources, gains, own, space)
-    return own
 
 
 @inlined
