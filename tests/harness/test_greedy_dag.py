@@ -5,7 +5,7 @@ from __future__ import annotations
 import functools
 import itertools
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 
 import networkx as nx
 import numpy as np
@@ -23,6 +23,7 @@ from generators.topologies.random_order import draw_along_random_order
 from harness.counts import prepare
 from harness.family_scores import Score, family_score, network_score
 from harness.knowledge import Knowledge
+from harness.learners import greedy_dag
 from harness.learners.greedy_dag import climb, hill_climbing, megabytes, tie_width
 from harness.learners.specification import call, specification_of
 from harness.records import Declined
@@ -385,6 +386,44 @@ def test_knowledge_is_in_every_search(
     assert (known.arcs <= graph.arrow).all()
     assert not (known.excluded & graph.arrow).any()
     assert np.array_equal(best, graph.arrow)
+
+
+def test_random_starts_accord_with_knowledge(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Every start is a DAG with all told arcs, no excluded one and few enough parents, by the stated rule."""
+    collected: list[Arrow] = []
+
+    def collect(*_: object, starts: Iterable[Arrow], required: Arrow, **__: object) -> Arrow:
+        collected.extend(starts)
+        return required
+
+    monkeypatch.setattr(greedy_dag, "climb", collect)
+    rng = np.random.default_rng(39)
+    n_cut = 0
+    for seed in range(200):
+        p, max_parents = int(rng.integers(2, 12)), int(rng.integers(1, 4))
+        data = as_data(np.zeros((1, p), dtype=np.int64), (2,) * p)
+        known = draw_knowledge(data.names, (0.15, 0.2), max_parents, rng)
+        draws = np.random.default_rng(seed)
+        mean, cap = min(1.0, (p - 1) / 2), min(max_parents, p - 1)
+        drawn = [draw_along_random_order(p, mean_parents=mean, max_parents=cap, rng=draws) for _ in range(3)]
+        collected.clear()
+
+        hill_climbing(
+            data,
+            max_parents=max_parents,
+            restarts=3,
+            knowledge=known,
+            rng=np.random.default_rng(seed),
+        )
+
+        for raw, start in zip(drawn, collected, strict=True):
+            assert is_acyclic(start)
+            assert start.sum(axis=0).max() <= max_parents
+            assert (known.arcs <= start).all()
+            assert not (known.excluded & start).any()
+            assert np.array_equal(admitted(raw, known, max_parents), start)
+            n_cut += not is_acyclic(known.arcs | (raw & ~known.excluded))
+    assert n_cut > 20  # cycles that no exclusion prevents did come up
 
 
 @functools.cache
