@@ -62,6 +62,7 @@ from harness.learners.specification import learner
 from harness.records import Declined
 
 Arrow = NDArray[np.bool_]
+Int = int | np.int64  # to kernels the same
 
 MAX_MEGABYTES = 1024
 START_MEAN_PARENTS = 1.0
@@ -252,7 +253,7 @@ def climb(
     [[1, 0]]
     """
     p, n = columns.codes.shape
-    most = int(required.sum(axis=0).max(initial=0))
+    most = int(np.bincount(np.flatnonzero(required) % p, minlength=1).max())
     if most > max_parents:
         raise Declined(f"{most} parents of one variable are known; at most {max_parents} are allowed")
     rule, space = scoring(columns, score, ess), workspace(columns)
@@ -341,11 +342,11 @@ class Search(NamedTuple):
 
 def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
     p = len(permitted)
-    into = np.ascontiguousarray((permitted | required).T)
-    into.flat[:: p + 1] = False
-    first = np.zeros(p + 1, dtype=np.int64)
-    np.cumsum(into.sum(axis=1), out=first[1:])
-    sources = np.nonzero(into)[1].astype(np.uint32)
+    allowed = permitted | required
+    allowed.flat[:: p + 1] = False
+    arcs = np.flatnonzero(allowed)
+    first, sources = np.zeros(p + 1, dtype=np.int64), np.empty(len(arcs), dtype=np.uint32)
+    _sort_by_target(arcs, first, sources)
     return Search(
         first,
         sources,
@@ -365,6 +366,31 @@ def _search(permitted: Arrow, required: Arrow, max_parents: int) -> Search:
 
 
 @kernel
+def _sort_by_target(arcs: NDArray[np.int64], first: NDArray[np.int64], sources: NDArray[np.uint32]) -> None:
+    # Of arcs p x + y, ascending: fills `sources` target by target, and `first`, which comes zeroed, with
+    # where each target's begin. (A counting sort; transposing a large matrix takes longer.)
+    p = first.shape[0] - 1
+    for fills in (False, True):
+        x, end = 0, p
+        for a in range(arcs.shape[0]):
+            while arcs[a] >= end:
+                x += 1
+                end += p
+            y = arcs[a] - (end - p)
+            if fills:
+                sources[first[y]] = x
+                first[y] += 1
+            else:
+                first[y + 1] += 1
+        if not fills:
+            for y in range(p):
+                first[y + 1] += first[y]
+    for y in range(p, 0, -1):  # each has moved on to the next one's beginning
+        first[y] = first[y - 1]
+    first[0] = 0
+
+
+@kernel
 def _climb(
     columns: Columns,
     rule: Scoring,
@@ -378,17 +404,17 @@ def _climb(
     # Returns that one's score.
     p = arrow.shape[0]
     changed = np.empty(p, dtype=np.int64)
-    before = np.empty(state.reaches.shape, dtype=np.uint64)
-    for y in range(p):
-        changed[y] = y
-        state.n_parents[y] = 0
-        for a in range(state.first[y], state.first[y + 1]):
-            x = np.int64(state.sources[a])
-            if arrow[x, y]:
-                _insert_parent(state, x, y)
-                arrow[x, y] = False
+    before = np.empty((p, state.reaches.shape[1]), dtype=np.uint64)
+    for v in range(p):
+        changed[v] = v
+        state.n_parents[v] = 0
+        for a in range(state.first[v], state.first[v + 1]):
+            u = np.int64(state.sources[a])
+            if arrow[u, v]:
+                _insert_parent(state, u, v)
+                arrow[u, v] = False
     _trace_paths(state, before)
-    n_changed, move = p, NONE
+    n_changed = p
     while True:
         for i in range(n_changed):
             _score_changes(columns, rule, is_equivalent, changed[i], state, space)
@@ -415,15 +441,15 @@ def _climb(
             if differs:
                 _find_best_addition(state, v)
     total = 0.0
-    for y in range(p):
-        total += state.scores[y]
-        for j in range(state.n_parents[y]):
-            arrow[state.parents[y, j], y] = True
+    for v in range(p):
+        total += state.scores[v]
+        for j in range(state.n_parents[v]):
+            arrow[state.parents[v, j], v] = True
     return total
 
 
 @inlined
-def _choose_move(width: float, state: Search) -> tuple[int, int, int]:
+def _choose_move(width: float, state: Search) -> tuple[int, Int, Int]:
     # The move, and the arc x -> y that it adds, deletes or reverses.
     gains, n_parents, reverse, losses = state.gains, state.n_parents, state.reverse, state.losses
     best_addition, best_change = state.best_addition, state.best_change
@@ -499,7 +525,7 @@ def _find_best_changes(state: Search, y: int) -> None:
 
 
 @inlined
-def _has_bit(bits: NDArray[np.uint64], v: int) -> bool:
+def _has_bit(bits: NDArray[np.uint64], v: Int) -> bool:
     return bool((bits[v // WORD_ROWS] >> np.uint64(v % WORD_ROWS)) & np.uint64(1))
 
 
@@ -515,7 +541,7 @@ def _may_reverse(state: Search, y: int, j: int) -> bool:
 
 
 @inlined
-def _place(first: NDArray[np.int64], sources: NDArray[np.uint32], x: int, y: int) -> int:
+def _place(first: NDArray[np.int64], sources: NDArray[np.uint32], x: Int, y: Int) -> Int:
     # Of the arc x -> y; -1 if it is not permitted.
     low, high = first[y], first[y + 1]
     end = high
@@ -529,7 +555,7 @@ def _place(first: NDArray[np.int64], sources: NDArray[np.uint32], x: int, y: int
 
 
 @inlined
-def _insert_parent(state: Search, x: int, y: int) -> None:
+def _insert_parent(state: Search, x: Int, y: Int) -> None:
     parents, reverse = state.parents[y], state.reverse[y]
     j = state.n_parents[y]
     while j > 0 and parents[j - 1] > x:
@@ -542,7 +568,7 @@ def _insert_parent(state: Search, x: int, y: int) -> None:
 
 
 @inlined
-def _remove_parent(state: Search, x: int, y: int) -> None:
+def _remove_parent(state: Search, x: Int, y: Int) -> None:
     parents, reverse = state.parents[y], state.reverse[y]
     state.n_parents[y] -= 1
     j = 0
@@ -554,7 +580,7 @@ def _remove_parent(state: Search, x: int, y: int) -> None:
 
 
 @inlined
-def _add_reach(own: NDArray[np.uint64], others: NDArray[np.uint64], y: int) -> None:
+def _add_reach(own: NDArray[np.uint64], others: NDArray[np.uint64], y: Int) -> None:
     # Who reaches y reaches all that y does.
     for w in range(own.shape[0]):
         own[w] |= others[w]
@@ -562,7 +588,7 @@ def _add_reach(own: NDArray[np.uint64], others: NDArray[np.uint64], y: int) -> N
 
 
 @inlined
-def _extend_paths(state: Search, x: int, y: int) -> None:
+def _extend_paths(state: Search, x: Int, y: Int) -> None:
     # After x -> y was added: from x upwards, past nothing that reached y before, for neither do the paths
     # beyond it.
     if _has_bit(state.reaches[x], y):
@@ -613,17 +639,30 @@ def _trace_paths(state: Search, before: NDArray[np.uint64]) -> None:
 def _score_changes(
     columns: Columns, rule: Scoring, is_equivalent: bool, y: int, state: Search, space: Workspace
 ) -> None:
-    # Scores y's family and the gain of every change to it.
+    # Scores y's family and the gain of every change to it. (One function, for each level of calls above
+    # the counting kernels adds seconds to the compilation.)
     first, sources, alone, gains = state.first, state.sources, state.alone, state.gains
     start, end, k = first[y], first[y + 1], state.n_parents[y]
     parents = state.parents[y, :k]
     has_room = k < state.parents.shape[1]
-    for a in range(start, end):
+    for a in range(start, end):  # what stays NaN is scored
         gains[a] = alone[a] if k == 0 else np.nan if has_room else -np.inf
     for j in range(k):
         gains[_place(first, sources, parents[j], y)] = -np.inf
-    own = _score_additions(columns, rule, parents, y, sources[start:end], gains[start:end], space)
+
+    r = columns.cardinalities[y]
+    n_planes = split_planes(columns, parents, y, space) * r
+    if n_planes > 0:
+        q = joint_states(columns, parents)
+        own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
+        _score_on_planes(
+            columns, rule, parents, y, sources[start:end], gains[start:end], n_planes, own, space
+        )
+    else:
+        own = score_family(columns, parents, y, rule, space)
+    _score_by_index(columns, rule, parents, y, sources[start:end], gains[start:end], own, space)
     state.scores[y] = own
+
     if k == 0:
         for a in range(start, end):
             if np.isnan(alone[a]):
@@ -640,29 +679,6 @@ def _score_changes(
             for i in range(k - 1):
                 others[i] = parents[i if i < j else i + 1]
             state.losses[y, j] = score_family(columns, others, y, rule, space) - own
-
-
-@inlined
-def _score_additions(
-    columns: Columns,
-    rule: Scoring,
-    parents: NDArray[np.int64],
-    y: int,
-    sources: NDArray[np.uint32],
-    gains: NDArray[np.float64],
-    space: Workspace,
-) -> float:
-    # Fills the gain of each source that is NaN, and returns the score of y with its parents alone.
-    r = columns.cardinalities[y]
-    n_planes = split_planes(columns, parents, y, space) * r
-    if n_planes > 0:
-        q = joint_states(columns, parents)
-        own = score_table(space.base_sizes, n_planes // r, r, np.int64(1), q, rule)
-        _score_on_planes(columns, rule, parents, y, sources, gains, n_planes, own, space)
-    else:
-        own = score_family(columns, parents, y, rule, space)
-    _score_by_index(columns, rule, parents, y, sources, gains, own, space)
-    return own
 
 
 @inlined
@@ -733,18 +749,17 @@ def _score_by_index(
     for a in range(sources.shape[0]):
         if not np.isnan(gains[a]):
             continue
-        x = np.int64(sources[a])
-        r_added = columns.cardinalities[x]
+        family[1] = sources[a]
+        r_added = columns.cardinalities[family[1]]
         q_added = min(q * r_added, MAX_JOINT_STATES)
         if not is_indexed and n_numbers * r_added <= room:
             n_numbers = index_rows(columns, parents, space) * r
             if n_numbers <= room:
                 append_column(columns, y, space)
                 is_indexed = True
-        if is_indexed and tabulate_index(columns, x, n_numbers, space):
+        if is_indexed and tabulate_index(columns, family[1], n_numbers, space):
             score = score_table(space.table, n_numbers // r, r, r_added, q_added, rule)
         else:
-            family[1] = x
             score = score_occurring(columns, family, q_added, rule, space)
             is_indexed = False
         gains[a] = score - own

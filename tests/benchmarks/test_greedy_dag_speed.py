@@ -1,4 +1,4 @@
-"""How long hill climbing takes: beside numpy's bincount for as many tables, and as p and n grow."""
+"""How long greedy search takes: beside numpy's bincount for as many tables, and as p, n and arcs grow."""
 
 from __future__ import annotations
 
@@ -9,12 +9,14 @@ from typing import Any
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from generators.cpts import generate_network
 from generators.dataset import Dataset
 from generators.sampling import sample
 from generators.topologies import generate_graph
-from harness.learners.greedy_dag import hill_climbing
+from harness.counts import prepare
+from harness.learners.greedy_dag import climb, hill_climbing
 
 pytestmark = pytest.mark.benchmark
 
@@ -96,3 +98,30 @@ def test_growth(small: tuple[int, int], large: tuple[int, int], benchmark: Any) 
     ratio = benchmark.stats.stats.min / seconds(lambda: learn(few, "bic"), 10)
     growth = large[0] / small[0] * large[1] / small[1]
     benchmark.extra_info["exponent"] = math.log(ratio) / math.log(growth)
+
+
+def permit(p: int, n_candidates: int) -> NDArray[np.bool_]:
+    """Permit the arcs from that many random candidates into each variable."""
+    rng = np.random.default_rng(n_candidates)
+    keys = rng.random((p, p)) + np.eye(p)
+    return np.asarray(keys <= np.sort(keys, axis=0)[n_candidates - 1])
+
+
+@pytest.mark.parametrize("n_candidates", [3, 12, 48])
+def test_a_search_among_permitted_arcs(n_candidates: int, benchmark: Any) -> None:
+    """A thousand variables with few candidate parents each, beside laying out the data; and per arc."""
+    p = 1000
+    data = draw_data(p, 10_000)
+    columns = prepare(data)
+    none = np.zeros((p, p), dtype=np.bool_)
+
+    def search(permitted: NDArray[np.bool_]) -> int:
+        arrow = climb(columns, score="bic", ess=1.0, max_parents=4, permitted=permitted, required=none)
+        return int(arrow.sum())
+
+    benchmark.pedantic(search, (permit(p, n_candidates),), rounds=5, warmup_rounds=1)
+
+    fastest = benchmark.stats.stats.min
+    benchmark.extra_info["ratio_to_prepare"] = fastest / seconds(lambda: prepare(data), 5)
+    twice_as_many = permit(p, 2 * n_candidates)
+    benchmark.extra_info["growth_with_arcs"] = seconds(lambda: search(twice_as_many), 5) / fastest
