@@ -6,6 +6,7 @@ for the marginal tests alone, while `pc` also makes all the conditional ones.
 
 from __future__ import annotations
 
+import functools
 import time
 from collections.abc import Callable
 from typing import Any
@@ -18,6 +19,7 @@ from generators.dataset import Dataset
 from generators.topologies import generate_graph
 from harness.learners.constraint import pc
 from harness.learners.marginal import chow_liu, pairwise
+from harness.learners.max_min import mmhc
 
 pytestmark = pytest.mark.benchmark
 
@@ -63,19 +65,57 @@ def test_pc(p: int, n: int, mean_parents: float, benchmark: Any) -> None:
     benchmark.extra_info["edges"] = graph.n_edges
 
 
+OTHERS = {
+    "pc conservative": functools.partial(pc, colliders="conservative"),
+    "pc majority": functools.partial(pc, colliders="majority"),
+    "pc at once": functools.partial(pc, updates="at-once"),
+    "mmhc": mmhc,
+}
+
+
+@pytest.mark.parametrize("method", OTHERS)
+@pytest.mark.parametrize("mean_parents", [1.0, 1.5])
+@pytest.mark.parametrize(
+    ("p", "n"), [(20, 1_000), (200, 1_000), (1000, 1_000), (200, 10_000), (1000, 10_000), (50, 100_000)]
+)
+def test_beside_pc(method: str, p: int, n: int, mean_parents: float, benchmark: Any) -> None:
+    """Other methods beside `pc` on the same data, all with their default settings; owed: 5 times at most."""
+    data = draw_dataset(p, n, mean_parents=mean_parents)
+    OTHERS[method](data.first(100))  # compiled before the clock starts
+    pc(data.first(100))
+
+    benchmark.pedantic(OTHERS[method], (data,), rounds=5)
+
+    benchmark.extra_info["ratio_to_pc"] = benchmark.stats.stats.min / seconds(lambda: pc(data))
+
+
+def test_permutations(benchmark: Any) -> None:
+    """`pc` with permutation tests on the data of 20 variables and 500 rows."""
+    data = draw_dataset(20, 500)
+    rng = np.random.default_rng(1)
+    permuting = functools.partial(pc, test="permutation", rng=rng)
+    permuting(data.first(20))
+
+    benchmark.pedantic(permuting, (data,), rounds=5)
+
+    benchmark.extra_info["ratio_to_pc"] = benchmark.stats.stats.min / seconds(lambda: pc(data))
+
+
+@pytest.mark.parametrize("method", ["pc", "mmhc"])
 @pytest.mark.parametrize(
     ("p", "n", "factor"),
     [(100, 1_000, (2, 1)), (400, 1_000, (2, 1)), (100, 1_000, (1, 4)), (100, 8_000, (1, 4))],
 )
-def test_growth(p: int, n: int, factor: tuple[int, int], benchmark: Any) -> None:
-    """How the time of `pc` grows from p x n: its exponent in the variables, or in the rows."""
+def test_growth(method: str, p: int, n: int, factor: tuple[int, int], benchmark: Any) -> None:
+    """How the time grows from p x n: its exponent in the variables, or in the rows."""
+    learn = {"pc": pc, **OTHERS}[method]
     small = draw_dataset(p, n)
     large = draw_dataset(factor[0] * p, factor[1] * n)
-    pc(small)
+    learn(small)
 
-    benchmark.pedantic(pc, (large,), rounds=5)
+    benchmark.pedantic(learn, (large,), rounds=5)
 
-    growth = benchmark.stats.stats.min / seconds(lambda: pc(small))
+    growth = benchmark.stats.stats.min / seconds(lambda: learn(small))
     benchmark.extra_info["exponent"] = float(np.log(growth) / np.log(max(factor)))
 
 
