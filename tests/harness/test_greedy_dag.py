@@ -23,7 +23,8 @@ from harness.counts import prepare
 from harness.family_scores import Score, family_score, network_score
 from harness.knowledge import Knowledge
 from harness.learners import greedy_dag
-from harness.learners.greedy_dag import climb, hill_climbing, megabytes, tie_width
+from harness.learners.greedy_dag import hill_climbing, megabytes
+from harness.learners.greedy_search import climb, tie_width
 from harness.learners.specification import call, specification_of
 from harness.records import Declined
 
