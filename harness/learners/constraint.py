@@ -121,6 +121,7 @@ def pc_on(
     knowledge: Knowledge | None = None,
 ) -> Graph:
     """Apply PC to evidence of any kind; settings are those of `pc` and of `find_skeleton`."""
+    knowledge = None if knowledge is None else knowledge.over(names)
     skeleton = find_skeleton(
         evidence,
         knowledge=knowledge,

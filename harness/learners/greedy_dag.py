@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from generators.dataset import Dataset
-from generators.errors import InputError
 from generators.graph import Graph
 from generators.settings import Between
 from generators.topologies.random_order import draw_along_random_order
@@ -110,12 +109,10 @@ def hill_climbing(
             f"hill-climbing would need about {needed:,.0f} MB here; it takes at most {MAX_MEGABYTES}"
         )
     p = data.n_variables
-    if knowledge is None:
-        permitted, required = np.ones((p, p), dtype=np.bool_), np.zeros((p, p), dtype=np.bool_)
-    elif knowledge.names == data.names:
-        permitted, required = ~knowledge.excluded, knowledge.arcs
-    else:
-        raise InputError("knowledge: is over other variables than the data, or in another order")
+    permitted, required = np.ones((p, p), dtype=np.bool_), np.zeros((p, p), dtype=np.bool_)
+    if knowledge is not None:
+        known = knowledge.over(data.names)
+        permitted, required = ~known.excluded, known.arcs
 
     def random_starts() -> Iterable[Arrow]:
         cap = max(1, min(max_parents, p - 1))

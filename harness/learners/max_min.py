@@ -31,7 +31,7 @@ from harness.independence.evidence import (
     set_base,
 )
 from harness.knowledge import Knowledge
-from harness.learners.greedy_dag import climb
+from harness.learners.greedy_search import climb
 from harness.learners.skeleton import DECIMALS, next_combination
 from harness.learners.specification import learner
 
@@ -97,6 +97,7 @@ def mmhc(
     >>> mmhc(Dataset(("a", "b", "c"), (("0", "1"),) * 3, codes)).edges()
     (('a', 'c', 'directed'), ('b', 'c', 'directed'))
     """
+    knowledge = None if knowledge is None else knowledge.over(data.names)
     evidence = data_tests(data, alpha=alpha, test=test, permutations=permutations, rng=rng)
     permitted = find_candidates(
         evidence,

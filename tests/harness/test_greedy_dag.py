@@ -509,15 +509,6 @@ def test_more_known_parents_than_are_allowed_are_declined() -> None:
     assert set(graph.parents("x5")) == {"x1", "x2", "x3"}
 
 
-def test_knowledge_is_over_the_data_s_variables() -> None:
-    """Knowledge over other names, or the same in another order, is refused."""
-    data = draw_data([2] * 3, 50, np.random.default_rng(37))
-
-    for names in (("x1", "x3", "x2"), ("a", "b", "c"), ("x1", "x2")):
-        with pytest.raises(InputError, match="knowledge: is over other variables"):
-            hill_climbing(data, knowledge=Knowledge.of(names), rng=unused_rng())
-
-
 def test_a_search_leaves_what_it_is_given() -> None:
     """Neither the matrices of arcs nor a start are written to."""
     rng = np.random.default_rng(38)

@@ -289,3 +289,25 @@ def test_knowledge_is_given_to_a_method_from_python() -> None:
         learn(repeats, data, knowledge=Knowledge.of("abcz"))
     with pytest.raises(InputError, match="no-arcs: takes no knowledge"):
         learn("no-arcs", data, knowledge=known)
+
+
+TAKERS = [name for name in BUILT_IN if built_in(name).takes_knowledge]
+
+
+@pytest.mark.parametrize("method", TAKERS)
+def test_learners_find_the_names(method: str) -> None:
+    """To learners the order of the knowledge's variables is of no account; others than the data's are refused."""
+    network = published_network("chest-clinic")
+    data = network.sample(800, rng=np.random.default_rng(1))
+    arcs = [(data.names[4], data.names[1]), (data.names[2], data.names[6])]
+    specification = built_in(method)
+
+    answers = [
+        call(specification, data, {}, np.random.default_rng(1), Knowledge.of(names, arcs=arcs)).graph
+        for names in (data.names, data.names[::-1])
+    ]
+
+    assert answers[0] == answers[1]
+    assert all(arc in {edge[:2] for edge in answers[0].edges()} for arc in arcs)
+    with pytest.raises(InputError, match="not over the data's variables"):
+        call(specification, data, {}, np.random.default_rng(1), Knowledge.of("abc"))
