@@ -18,6 +18,7 @@ from scipy.stats import binomtest
 
 from generators.dataset import Dataset, code_dtype
 from generators.errors import InputError
+from generators.graph import Graph
 from generators.topologies.random_order import draw_along_random_order
 from harness.counts import prepare
 from harness.family_scores import Score, family_score, network_score

@@ -10,10 +10,13 @@ import networkx as nx
 import numpy as np
 import pytest
 
+from generators.catalogue import published_network
 from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
 from harness.knowledge import Knowledge, canonical, read_knowledge, read_statements
+from harness.learners.builtin import BUILT_IN, built_in
+from harness.learners.specification import call
 from harness.studies.applying import learn
 
 NAMES = ("age", "sex", "dose", "cure")
@@ -296,7 +299,7 @@ TAKERS = [name for name in BUILT_IN if built_in(name).takes_knowledge]
 
 @pytest.mark.parametrize("method", TAKERS)
 def test_learners_find_the_names(method: str) -> None:
-    """To learners the order of the knowledge's variables is of no account; others than the data's are refused."""
+    """To learners the order of the knowledge's variables is of no account; other names are refused."""
     network = published_network("chest-clinic")
     data = network.sample(800, rng=np.random.default_rng(1))
     arcs = [(data.names[4], data.names[1]), (data.names[2], data.names[6])]
