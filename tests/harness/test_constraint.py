@@ -281,7 +281,7 @@ class TestAgainstPlain:
             n_ambiguous += len(ambiguous)
         assert n_separated > 40
         assert n_colliders > 10
-        assert (n_deep > 0) == (settings.get("max_conditioning") != 1)
+        assert n_deep > 0 or settings.get("max_conditioning") == 1
         assert (n_ambiguous > 10) == (settings.get("colliders", "plain") != "plain")
 
 

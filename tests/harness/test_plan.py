@@ -15,6 +15,7 @@ from hypothesis import strategies as st
 from generators.catalogue import published_network
 from generators.errors import InputError
 from generators.files import write_network
+from harness.learners.builtin import BUILT_IN
 from harness.plan.draft import draft_plan
 from harness.plan.expansion import mean_parents, settings_for
 from harness.plan.schema import Plan, expected_runs, parse_plan, read_plan
@@ -728,7 +729,7 @@ WRONG_DATA = {
         "data.knowledge.file: is for given networks; drawn ones have variables of their own.",
     ],
 }
-METHODS = "chance, chow-liu, hill-climbing, no-arcs, pairwise, pc"
+METHODS = ", ".join(sorted(BUILT_IN))
 WRONG_LEARNERS = {
     "[learner]\nmethod = 'pc'": ["learner: must be written as [[learner]], one such table per learner."],
     "[[learner]]": ["learner[1]: needs a method or a source."],
