@@ -116,7 +116,7 @@ def data_tests(
     *,
     alpha: float,
     test: Test = "g2",
-    permutations: int = 999,
+    permutations: int | None = None,
     rng: np.random.Generator | None = None,
 ) -> DataTests:
     """Prepare tests on a dataset.
@@ -128,8 +128,8 @@ def data_tests(
     alpha : float
         Level of each test; strictly between 0 and 1.
     test : {"g2", "pearson", "permutation"}
-    permutations : int
-        Of each permutation test, at most.
+    permutations : int, optional
+        Of each permutation test, at most; see `permutations_at`.
     rng : numpy.random.Generator, optional
         Needed by the permutation test only, which draws one number from it.
 

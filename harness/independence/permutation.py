@@ -26,6 +26,8 @@ from generators.philox import draw_words
 from harness.counts import Columns, Workspace, index_rows, prepare
 from harness.independence.statistics import ROUNDING, StatisticWorkspace, statistic_workspace
 
+DEALS_ALLOWED = 10  # by default: of that many, one less may be as large as what was seen
+
 
 class Permutations(NamedTuple):
     """How many deals are drawn, and from which seed; kernels take it as it is.
@@ -44,8 +46,15 @@ class Permutations(NamedTuple):
     n_allowed: int
 
 
-def permutations_at(alpha: float, n: int, rng: np.random.Generator) -> Permutations:
+def permutations_at(alpha: float, n: int | None, rng: np.random.Generator) -> Permutations:
     """Draw the seed of the permutation tests at one level.
+
+    Parameters
+    ----------
+    alpha : float
+    n : int, optional
+        How many deals are drawn at most; by default 10 / alpha - 1, which is 999 at 1 %.
+    rng : numpy.random.Generator
 
     Raises
     ------
@@ -54,10 +63,12 @@ def permutations_at(alpha: float, n: int, rng: np.random.Generator) -> Permutati
 
     Examples
     --------
-    >>> permutations_at(0.05, 199, np.random.default_rng(1))[1:]
+    >>> permutations_at(0.05, None, np.random.default_rng(1))[1:]
     (199, 9)
     """
     # A product such as 0.07 x 100 = 7.000000000000001 must not lose or gain one.
+    if n is None:
+        n = math.ceil(DEALS_ALLOWED / alpha - 1e-9) - 1
     n_allowed = math.floor(alpha * (n + 1) + 1e-9) - 1
     if n_allowed < 0:
         raise InputError(

@@ -35,7 +35,7 @@ def pc(
     *,
     alpha: Annotated[float, Between(0, 1, inside=True)] = 0.01,
     test: Test = "g2",
-    permutations: Annotated[int, Between(1)] = 999,
+    permutations: Annotated[int, Between(1)] | None = None,
     min_per_cell: Annotated[float, Between(0)] = 0.0,
     max_conditioning: Annotated[int, Between(0)] | None = None,
     updates: Updates = "after-level",
@@ -54,8 +54,8 @@ def pc(
     test : {"g2", "pearson", "permutation"}
         The first two with nominal degrees of freedom; the last compares G2 with its values after random
         permutations within strata, and suits tables with few rows per cell. See `harness.independence`.
-    permutations : int
-        Of each permutation test, at most. `alpha` times one more than this must be 1 at least.
+    permutations : int, optional
+        Of each permutation test, at most; at least 1 / `alpha` - 1, by default 10 / `alpha` - 1.
     min_per_cell : float
         A test needs at least this many rows per cell of its nominal table, the product of the declared
         numbers of states of all its variables; a test that has fewer is not made, and the pair keeps its

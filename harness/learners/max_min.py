@@ -50,7 +50,7 @@ def mmhc(
     *,
     alpha: Annotated[float, Between(0, 1, inside=True)] = 0.05,
     test: Test = "g2",
-    permutations: Annotated[int, Between(1)] = 999,
+    permutations: Annotated[int, Between(1)] | None = None,
     min_per_cell: Annotated[float, Between(0)] = 5.0,
     max_conditioning: Annotated[int, Between(0)] | None = None,
     score: Score = "bic",
