@@ -24,6 +24,7 @@ from harness.counts import (
     Columns,
     Workspace,
     append_column,
+    count_within,
     index_rows,
     prepare,
     split_planes,
@@ -225,6 +226,138 @@ def conditional_statistic(
         return _table_statistic(parts[1], r_x, r_y, work, is_pearson)
     parts[1] = 0  # what follows overwrites the index
     return _statistic_by_row(columns, given, x, y, space, is_pearson)
+
+
+@inlined
+def entropy_ceiling(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> float:
+    """Compute 2 n times the entropy of x given others: G2 of x and anything else given them is at most that.
+
+    It makes the base of `given` and x, which must not stand in `work` yet.
+
+    Returns
+    -------
+    float
+        Infinity where it would take too long.
+    """
+    r_x, table = columns.cardinalities[x], work.space.table
+    work.parts[0] = split_planes(columns, given, x, work.space)
+    if work.parts[0] > 0:
+        return _entropy(work.space.base_sizes, work.parts[0], r_x, work.x_log_x)
+    work.parts[1] = _number_rows(columns, given, x, work.space)
+    n_cells = work.parts[1] * r_x
+    if n_cells > table.shape[0]:
+        return np.inf
+    for c in range(n_cells):
+        table[c] = 0
+    for number in work.space.index:
+        table[number] += np.uint32(1)
+    return _entropy(table, work.parts[1], r_x, work.x_log_x)
+
+
+@inlined
+def _entropy(sizes: NDArray[np.uint32], n_parts: int, r_x: int, x_log_x: NDArray[np.float64]) -> float:
+    total = 0.0
+    for c in range(n_parts):
+        rows = np.uint32(0)
+        for size in sizes[c * r_x : (c + 1) * r_x]:
+            rows += size
+            total -= x_log_x[size]
+        total += x_log_x[rows]
+    return 2 * total
+
+
+@inlined
+def conditional_statistics_with(
+    columns: Columns,
+    given: NDArray[np.int64],
+    x: int,
+    others: NDArray[np.int64],
+    is_wanted: NDArray[np.bool_],
+    work: StatisticWorkspace,
+    is_pearson: bool,
+    statistics: NDArray[np.float64],
+) -> None:
+    """Compute the statistics of x and each of many variables given others.
+
+    Parameters
+    ----------
+    columns : Columns
+    given : int64 array, shape (k,)
+    x : int
+    others : int64 array, shape (m,)
+    is_wanted : bool array, shape (m,)
+    work : StatisticWorkspace
+        As for `conditional_statistic`.
+    is_pearson : bool
+        X2 if true, else G2.
+    statistics : float64 array, shape (at least m,)
+        Filled where wanted.
+    """
+    if work.parts[0] == 0:
+        work.parts[0] = split_planes(columns, given, x, work.space)
+    n_parts, r_x, space = work.parts[0], columns.cardinalities[x], work.space
+    is_small = not is_pearson and n_parts > 0
+    if is_small:
+        _g2_on_planes(
+            columns.planes,
+            columns.offsets,
+            others,
+            is_wanted,
+            n_parts,
+            r_x,
+            space.base,
+            space.base_sizes,
+            space.table,
+            work.x_log_x,
+            statistics,
+        )
+    for i in range(others.shape[0]):
+        y = others[i]
+        if is_wanted[i] and not (is_small and _fits_planes(columns.offsets, n_parts * r_x, y)):
+            statistics[i] = conditional_statistic(columns, given, x, y, work, is_pearson)
+
+
+@inlined
+def _fits_planes(offsets: NDArray[np.int64], n_planes: int, y: int) -> bool:
+    return bool(0 < n_planes * (offsets[y + 1] - offsets[y]) <= MAX_PLANE_CELLS)
+
+
+@inlined
+def _g2_on_planes(
+    planes: NDArray[np.uint64],
+    offsets: NDArray[np.int64],
+    others: NDArray[np.int64],
+    is_wanted: NDArray[np.bool_],
+    n_parts: int,
+    r_x: int,
+    base: NDArray[np.uint64],
+    base_sizes: NDArray[np.uint32],
+    table: NDArray[np.uint32],
+    x_log_x: NDArray[np.float64],
+    statistics: NDArray[np.float64],
+) -> None:
+    # Of those whose table is small. Nothing in here takes a tuple of arrays (see `count_within`).
+    n_planes = n_parts * r_x
+    own = _entropy(base_sizes, n_parts, r_x, x_log_x)
+    for i in range(others.shape[0]):
+        y = others[i]
+        if not is_wanted[i] or not _fits_planes(offsets, n_planes, y):
+            continue
+        r_y = offsets[y + 1] - offsets[y]
+        for c in range(n_planes * r_y):
+            table[c] = 0
+        count_within(planes, offsets[y], r_y, 0, planes.shape[1], base, base_sizes, n_planes, table)
+        half = 0.0
+        for c in range(n_planes * r_y):
+            half += x_log_x[table[c]]
+        for c in range(n_parts):
+            part = table[c * r_x * r_y : (c + 1) * r_x * r_y]
+            for s in range(r_y):
+                column_size = np.uint32(0)
+                for row in range(r_x):
+                    column_size += part[row * r_y + s]
+                half -= x_log_x[column_size]
+        statistics[i] = own + 2 * half
 
 
 @inlined
