@@ -174,6 +174,8 @@ class StatisticWorkspace(NamedTuple):
     parts : int64 array, shape (2,)
         How many joint states the base that stands in `space` has: on planes, by index. 0: not made yet;
         -1: cannot be made.
+    own : float64 array, shape (2,)
+        2 n times the entropy of x given the others, for the two kinds of base alike; NaN: not known yet.
     x_log_x : float64 array, shape (n + 1,)
         m log m for each count m.
     margin : uint32 array, shape (max states,)
@@ -181,6 +183,7 @@ class StatisticWorkspace(NamedTuple):
 
     space: Workspace
     parts: NDArray[np.int64]
+    own: NDArray[np.float64]
     x_log_x: NDArray[np.float64]
     margin: NDArray[np.uint32]
 
@@ -191,6 +194,7 @@ def statistic_workspace(columns: Columns) -> StatisticWorkspace:
     return StatisticWorkspace(
         space=workspace(columns),
         parts=np.zeros(2, dtype=np.int64),
+        own=np.full(2, np.nan),
         x_log_x=counts * np.log(np.maximum(counts, 1)),
         margin=np.empty(int(columns.cardinalities.max(initial=1)), dtype=np.uint32),
     )
@@ -217,13 +221,13 @@ def conditional_statistic(
     r_x, r_y = columns.cardinalities[x], columns.cardinalities[y]
     space, parts = work.space, work.parts
     if parts[0] == 0:
-        parts[0] = split_planes(columns, given, x, space)
+        _make_planes(columns, given, x, work)
     if 0 < parts[0] * r_x * r_y <= MAX_PLANE_CELLS and tabulate_planes(columns, y, parts[0] * r_x, space):
-        return _table_statistic(parts[0], r_x, r_y, work, is_pearson)
+        return _table_statistic(0, r_x, r_y, work, is_pearson)
     if parts[1] == 0:
-        parts[1] = _number_rows(columns, given, x, space)
+        _make_index(columns, given, x, work)
     if tabulate_index(columns, y, parts[1] * r_x, space):
-        return _table_statistic(parts[1], r_x, r_y, work, is_pearson)
+        return _table_statistic(1, r_x, r_y, work, is_pearson)
     parts[1] = 0  # what follows overwrites the index
     return _statistic_by_row(columns, given, x, y, space, is_pearson)
 
@@ -232,38 +236,30 @@ def conditional_statistic(
 def entropy_ceiling(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> float:
     """Compute 2 n times the entropy of x given others: G2 of x and anything else given them is at most that.
 
-    It makes the base of `given` and x, which must not stand in `work` yet.
+    Parameters are those of `conditional_statistic`.
 
     Returns
     -------
     float
         Infinity where it would take too long.
     """
-    r_x, table = columns.cardinalities[x], work.space.table
-    work.parts[0] = split_planes(columns, given, x, work.space)
+    r_x, space = columns.cardinalities[x], work.space
+    if work.parts[0] == 0:
+        _make_planes(columns, given, x, work)
     if work.parts[0] > 0:
-        return _entropy(work.space.base_sizes, work.parts[0], r_x, work.x_log_x)
-    work.parts[1] = _number_rows(columns, given, x, work.space)
+        return float(work.own[0])
+    if work.parts[1] == 0:
+        _make_index(columns, given, x, work)
     n_cells = work.parts[1] * r_x
-    if n_cells > table.shape[0]:
-        return np.inf
-    for c in range(n_cells):
-        table[c] = 0
-    for number in work.space.index:
-        table[number] += np.uint32(1)
-    return _entropy(table, work.parts[1], r_x, work.x_log_x)
-
-
-@inlined
-def _entropy(sizes: NDArray[np.uint32], n_parts: int, r_x: int, x_log_x: NDArray[np.float64]) -> float:
-    total = 0.0
-    for c in range(n_parts):
-        rows = np.uint32(0)
-        for size in sizes[c * r_x : (c + 1) * r_x]:
-            rows += size
-            total -= x_log_x[size]
-        total += x_log_x[rows]
-    return 2 * total
+    if np.isnan(work.own[1]):
+        if n_cells > space.table.shape[0]:
+            return np.inf
+        for c in range(n_cells):
+            space.table[c] = 0
+        for number in space.index:
+            space.table[number] += np.uint32(1)
+        work.own[1] = _own_entropy(space.table, work.parts[1], r_x, 1, work.x_log_x)
+    return float(work.own[1])
 
 
 @inlined
@@ -294,10 +290,10 @@ def conditional_statistics_with(
         Filled where wanted.
     """
     if work.parts[0] == 0:
-        work.parts[0] = split_planes(columns, given, x, work.space)
+        _make_planes(columns, given, x, work)
     n_parts, r_x, space = work.parts[0], columns.cardinalities[x], work.space
-    is_small = not is_pearson and n_parts > 0
-    if is_small:
+    is_fast = not is_pearson and n_parts > 0
+    if is_fast:
         _g2_on_planes(
             columns.planes,
             columns.offsets,
@@ -308,13 +304,13 @@ def conditional_statistics_with(
             space.base,
             space.base_sizes,
             space.table,
+            work.own[0],
             work.x_log_x,
             statistics,
         )
     for i in range(others.shape[0]):
-        y = others[i]
-        if is_wanted[i] and not (is_small and _fits_planes(columns.offsets, n_parts * r_x, y)):
-            statistics[i] = conditional_statistic(columns, given, x, y, work, is_pearson)
+        if is_wanted[i] and not (is_fast and _fits_planes(columns.offsets, n_parts * r_x, others[i])):
+            statistics[i] = conditional_statistic(columns, given, x, others[i], work, is_pearson)
 
 
 @inlined
@@ -333,31 +329,35 @@ def _g2_on_planes(
     base: NDArray[np.uint64],
     base_sizes: NDArray[np.uint32],
     table: NDArray[np.uint32],
+    own: float,
     x_log_x: NDArray[np.float64],
     statistics: NDArray[np.float64],
 ) -> None:
     # Of those whose table is small. Nothing in here takes a tuple of arrays (see `count_within`).
     n_planes = n_parts * r_x
-    own = _entropy(base_sizes, n_parts, r_x, x_log_x)
     for i in range(others.shape[0]):
         y = others[i]
-        if not is_wanted[i] or not _fits_planes(offsets, n_planes, y):
-            continue
-        r_y = offsets[y + 1] - offsets[y]
-        for c in range(n_planes * r_y):
-            table[c] = 0
-        count_within(planes, offsets[y], r_y, 0, planes.shape[1], base, base_sizes, n_planes, table)
-        half = 0.0
-        for c in range(n_planes * r_y):
-            half += x_log_x[table[c]]
-        for c in range(n_parts):
-            part = table[c * r_x * r_y : (c + 1) * r_x * r_y]
-            for s in range(r_y):
-                column_size = np.uint32(0)
-                for row in range(r_x):
-                    column_size += part[row * r_y + s]
-                half -= x_log_x[column_size]
-        statistics[i] = own + 2 * half
+        if is_wanted[i] and _fits_planes(offsets, n_planes, y):
+            r_y = offsets[y + 1] - offsets[y]
+            for c in range(n_planes * r_y):
+                table[c] = 0
+            count_within(planes, offsets[y], r_y, 0, planes.shape[1], base, base_sizes, n_planes, table)
+            statistics[i] = own - _remaining_entropy(table, n_parts, r_x, r_y, x_log_x)
+
+
+@inlined
+def _make_planes(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> None:
+    n_parts = split_planes(columns, given, x, work.space)
+    work.parts[0] = n_parts
+    if n_parts > 0:
+        r_x = columns.cardinalities[x]
+        work.own[0] = _own_entropy(work.space.base_sizes, n_parts, r_x, 1, work.x_log_x)
+
+
+@inlined
+def _make_index(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> None:
+    work.parts[1] = _number_rows(columns, given, x, work.space)
+    work.own[1] = np.nan
 
 
 @inlined
@@ -377,34 +377,64 @@ def _number_rows(columns: Columns, given: NDArray[np.int64], x: int, space: Work
 
 
 @inlined
-def _table_statistic(n_parts: int, r_x: int, r_y: int, work: StatisticWorkspace, is_pearson: bool) -> float:
-    total = 0.0
-    for c in range(n_parts):
-        part = work.space.table[c * r_x * r_y : (c + 1) * r_x * r_y]
-        total += (
-            _x2_part(part, r_x, r_y, work.margin) if is_pearson else _g2_part(part, r_x, r_y, work.x_log_x)
-        )
-    return total
+def _table_statistic(kind: int, r_x: int, r_y: int, work: StatisticWorkspace, is_pearson: bool) -> float:
+    # Of the table that stands in `work`, counted on a base of the given kind (0: planes, 1: index).
+    n_parts, table = work.parts[kind], work.space.table
+    if is_pearson:
+        total = 0.0
+        for c in range(n_parts):
+            total += _x2_part(table[c * r_x * r_y : (c + 1) * r_x * r_y], r_x, r_y, work.margin)
+        return total
+    # G2 is 2 n times an entropy of x given the conditioning variables, less that given y as well.
+    if np.isnan(work.own[kind]):
+        work.own[kind] = _own_entropy(table, n_parts, r_x, r_y, work.x_log_x)
+    return float(work.own[kind] - _remaining_entropy(table, n_parts, r_x, r_y, work.x_log_x))
 
 
 @inlined
-def _g2_part(part: NDArray[np.uint32], r_x: int, r_y: int, x_log_x: NDArray[np.float64]) -> float:
+def _own_entropy(
+    table: NDArray[np.uint32], n_parts: int, r_x: int, r_y: int, x_log_x: NDArray[np.float64]
+) -> float:
+    # 2 n times the entropy of x given the part.
     total = 0.0
-    size = np.uint32(0)
-    for x in range(r_x):
-        row = part[x * r_y : (x + 1) * r_y]
-        row_size = np.uint32(0)
+    for c in range(n_parts):
+        size = np.uint32(0)
+        for x in range(c * r_x, (c + 1) * r_x):
+            row_size = np.uint32(0)
+            for cell in table[x * r_y : (x + 1) * r_y]:
+                row_size += cell
+            total -= x_log_x[row_size]
+            size += row_size
+        total += x_log_x[size]
+    return 2 * total
+
+
+@inlined
+def _remaining_entropy(
+    table: NDArray[np.uint32], n_parts: int, r_x: int, r_y: int, x_log_x: NDArray[np.float64]
+) -> float:
+    # 2 n times the entropy of x given the part and y. Four sums take turns, so that one addition need not
+    # wait for the last.
+    n_cells = n_parts * r_x * r_y
+    a, b, c, d = 0.0, 0.0, 0.0, 0.0
+    fours = n_cells // 4 * 4
+    for i in range(0, fours, 4):
+        four = table[i : i + 4]
+        a += x_log_x[four[0]]
+        b += x_log_x[four[1]]
+        c += x_log_x[four[2]]
+        d += x_log_x[four[3]]
+    for i in range(fours, n_cells):
+        a += x_log_x[table[i]]
+    total = 0.0
+    for i in range(n_parts):
+        part = table[i * r_x * r_y : (i + 1) * r_x * r_y]
         for y in range(r_y):
-            row_size += row[y]
-            total += x_log_x[row[y]]
-        total -= x_log_x[row_size]
-        size += row_size
-    for y in range(r_y):
-        column_size = np.uint32(0)
-        for x in range(r_x):
-            column_size += part[x * r_y + y]
-        total -= x_log_x[column_size]
-    return float(2 * (total + x_log_x[size]))
+            column_size = np.uint32(0)
+            for x in range(r_x):
+                column_size += part[x * r_y + y]
+            total += x_log_x[column_size]
+    return 2 * (total - (a + b + c + d))
 
 
 @inlined

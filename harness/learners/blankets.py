@@ -337,10 +337,10 @@ def _find_blankets(
             for y in range(p):
                 others[n_others] = y
                 n_others += is_open[y] and not blanket[y] and y != x
-            associations(evidence, members[:m], x, others[:n_others], found)
             if method == GROW_SHRINK:
-                added = _next_dependent(others[:n_others], found, own_strength, last)
+                added = _next_dependent(evidence, members[:m], x, others[:n_others], own_strength, last)
             else:
+                associations(evidence, members[:m], x, others[:n_others], found)
                 added = _most_associated(others[:n_others], found)
             if added < 0:
                 break
@@ -383,19 +383,28 @@ def _is_before(strength: NDArray[np.float64], x: int, y: int) -> bool:
 
 @inlined
 def _next_dependent(
-    others: NDArray[np.int64], found: NDArray[np.float64], strength: NDArray[np.float64], last: int
+    evidence: Evidence,
+    given: NDArray[np.int64],
+    x: int,
+    others: NDArray[np.int64],
+    strength: NDArray[np.float64],
+    last: int,
 ) -> int:
-    # The first after `last` that is dependent; if there is none, the first of all; else -1.
-    first, following = -1, -1
-    for i in range(others.shape[0]):
-        y = others[i]
-        if found[i] > 0.0:
-            if first < 0 or _is_before(strength, y, first):
-                first = y
-            is_following = last >= 0 and _is_before(strength, last, y)
-            if is_following and (following < 0 or _is_before(strength, y, following)):
-                following = y
-    return following if following >= 0 else first
+    # The first that is dependent on x, going round from `last`; -1 if none is.
+    set_base(evidence)
+    y = last
+    for _ in range(others.shape[0]):
+        first, following = -1, -1
+        for v in others:
+            if first < 0 or _is_before(strength, v, first):
+                first = v
+            is_later = y >= 0 and _is_before(strength, y, v)
+            if is_later and (following < 0 or _is_before(strength, v, following)):
+                following = v
+        y = following if following >= 0 else first
+        if is_dependent(evidence, given, x, y):
+            return y
+    return -1
 
 
 @inlined
