@@ -33,7 +33,7 @@ from numpy.typing import NDArray
 
 from generators.adjacency import Nodes, Offsets
 from generators.classes import dag_class_lists
-from generators.compiled import kernel, warm_up
+from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
@@ -319,8 +319,7 @@ def _association(evidence: Any, given: Any, x: Any, y: Any) -> Any:
             statistic = conditional_statistic(evidence.columns, given, x, y, evidence.work, is_pearson)
         if statistic <= limit + ROUNDING:
             return 0.0
-        roots = np.cbrt(statistic / df) - np.cbrt(limit / df)
-        return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
+        return _excess(statistic, limit, df)
 
     def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int) -> float:
         return 1.0 if is_dependent(evidence, given, x, y) else 0.0
@@ -333,11 +332,12 @@ def associations(
     given: NDArray[np.int64],
     x: int,
     others: NDArray[np.int64],
+    is_first_enough: bool,
     found: NDArray[np.float64],
 ) -> None:
     """Say how strongly x and each of many variables are associated given others.
 
-    The same as `set_base` and `association` for each of them, only faster: what is the same for all is
+    The same as `set_base`, and `association` for each of them, only faster: what is the same for all is
     done once.
 
     Parameters
@@ -347,6 +347,8 @@ def associations(
     x : int
     others : int64 array, shape (m,)
         Neither x nor given.
+    is_first_enough : bool
+        Whether all that come after the first that is associated are passed over, as if they were not.
     found : float64 array, shape (at least m,)
         Filled.
     """
@@ -354,40 +356,50 @@ def associations(
 
 
 @_compiled_for(associations)
-def _associations(evidence: Any, given: Any, x: Any, others: Any, found: Any) -> Any:
+def _associations(evidence: Any, given: Any, x: Any, others: Any, is_first_enough: Any, found: Any) -> Any:
     def of_data(
         evidence: DataTests,
         given: NDArray[np.int64],
         x: int,
         others: NDArray[np.int64],
+        is_first_enough: bool,
         found: NDArray[np.float64],
     ) -> None:
-        m, sizes = others.shape[0], evidence.cardinalities
+        m, sizes, statistics = others.shape[0], evidence.cardinalities, evidence.statistics[x]
         evidence.work.parts[:] = 0
-        if given.shape[0] == 0 or evidence.kind == PERMUTATION:
-            for i in range(m):
-                found[i] = association(evidence, given, x, others[i])
-            return
         factor = np.float64(sizes[x] - 1)
         for v in given:
             factor *= sizes[v]
+        is_done = False
+        if evidence.kind == PERMUTATION:
+            for i in range(m):
+                found[i] = 0.0
+                if not is_done and factor * (sizes[others[i]] - 1) > 0:
+                    n_as_large, deviate = deal_out(
+                        evidence.columns, given, x, others[i], evidence.work, evidence.draws
+                    )
+                    if n_as_large <= evidence.draws.n_allowed:
+                        found[i] = max(deviate, LEAST_ASSOCIATION)
+                        is_done = is_first_enough
+            return
         ceiling = evidence.ceilings[x]
-        if evidence.kind == G2:
+        if evidence.kind == G2 and given.shape[0] > 0:
             ceiling = min(ceiling, entropy_ceiling(evidence.columns, given, x, evidence.work))
-        limits, is_open = np.empty(m), np.empty(m, dtype=np.bool_)
+        limits = np.empty(m)
         for i in range(m):
             y, df = others[i], factor * (sizes[others[i]] - 1)
-            limits[i] = critical_value(evidence.critical, df) if df > 0 else np.inf
-            is_open[i] = limits[i] < min(ceiling, evidence.ceilings[y])
-        is_pearson = evidence.kind == PEARSON
-        conditional_statistics_with(
-            evidence.columns, given, x, others, is_open, evidence.work, is_pearson, found
-        )
+            limit = critical_value(evidence.critical, df) if df > 0 else np.inf
+            limits[i] = limit + ROUNDING if limit < min(ceiling, evidence.ceilings[y]) else np.inf
+            found[i] = statistics[y]
+        if given.shape[0] > 0:
+            is_pearson = evidence.kind == PEARSON
+            conditional_statistics_with(
+                evidence.columns, given, x, others, limits, is_first_enough, evidence.work, is_pearson, found
+            )
         for i in range(m):
-            if is_open[i] and found[i] > limits[i] + ROUNDING:
-                df = factor * (sizes[others[i]] - 1)
-                roots = np.cbrt(found[i] / df) - np.cbrt(limits[i] / df)
-                found[i] = max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION)
+            if found[i] > limits[i] and not is_done:
+                found[i] = _excess(found[i], limits[i] - ROUNDING, factor * (sizes[others[i]] - 1))
+                is_done = is_first_enough
             else:
                 found[i] = 0.0
 
@@ -396,12 +408,21 @@ def _associations(evidence: Any, given: Any, x: Any, others: Any, found: Any) ->
         given: NDArray[np.int64],
         x: int,
         others: NDArray[np.int64],
+        is_first_enough: bool,
         found: NDArray[np.float64],
     ) -> None:
+        is_done = False
         for i in range(others.shape[0]):
-            found[i] = association(evidence, given, x, others[i])
+            found[i] = 0.0 if is_done else association(evidence, given, x, others[i])
+            is_done |= is_first_enough and found[i] > 0.0
 
     return of_data if _is(evidence, DataTests) else of_graph
+
+
+@inlined
+def _excess(statistic: float, limit: float, df: float) -> float:
+    roots = np.cbrt(statistic / df) - np.cbrt(limit / df)
+    return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
 
 
 def find_lower_bounds(

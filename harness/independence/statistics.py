@@ -268,7 +268,8 @@ def conditional_statistics_with(
     given: NDArray[np.int64],
     x: int,
     others: NDArray[np.int64],
-    is_wanted: NDArray[np.bool_],
+    limits: NDArray[np.float64],
+    is_first_enough: bool,
     work: StatisticWorkspace,
     is_pearson: bool,
     statistics: NDArray[np.float64],
@@ -281,68 +282,39 @@ def conditional_statistics_with(
     given : int64 array, shape (k,)
     x : int
     others : int64 array, shape (m,)
-    is_wanted : bool array, shape (m,)
+    limits : float64 array, shape (m,)
+        Where infinite, nothing is computed.
+    is_first_enough : bool
+        Whether nothing is computed after the first statistic above its limit.
     work : StatisticWorkspace
         As for `conditional_statistic`.
     is_pearson : bool
         X2 if true, else G2.
     statistics : float64 array, shape (at least m,)
-        Filled where wanted.
+        Filled; 0 for what is not computed.
     """
     if work.parts[0] == 0:
         _make_planes(columns, given, x, work)
-    n_parts, r_x, space = work.parts[0], columns.cardinalities[x], work.space
-    is_fast = not is_pearson and n_parts > 0
-    if is_fast:
-        _g2_on_planes(
-            columns.planes,
-            columns.offsets,
-            others,
-            is_wanted,
-            n_parts,
-            r_x,
-            space.base,
-            space.base_sizes,
-            space.table,
-            work.own[0],
-            work.x_log_x,
-            statistics,
-        )
+    planes, offsets, n_words = columns.planes, columns.offsets, columns.planes.shape[1]
+    base, sizes, table = work.space.base, work.space.base_sizes, work.space.table
+    x_log_x, own = work.x_log_x, work.own[0]
+    n_parts, r_x = work.parts[0], columns.cardinalities[x]
+    n_planes = 0 if is_pearson else n_parts * r_x
+    is_done = False
     for i in range(others.shape[0]):
-        if is_wanted[i] and not (is_fast and _fits_planes(columns.offsets, n_parts * r_x, others[i])):
-            statistics[i] = conditional_statistic(columns, given, x, others[i], work, is_pearson)
-
-
-@inlined
-def _fits_planes(offsets: NDArray[np.int64], n_planes: int, y: int) -> bool:
-    return bool(0 < n_planes * (offsets[y + 1] - offsets[y]) <= MAX_PLANE_CELLS)
-
-
-@inlined
-def _g2_on_planes(
-    planes: NDArray[np.uint64],
-    offsets: NDArray[np.int64],
-    others: NDArray[np.int64],
-    is_wanted: NDArray[np.bool_],
-    n_parts: int,
-    r_x: int,
-    base: NDArray[np.uint64],
-    base_sizes: NDArray[np.uint32],
-    table: NDArray[np.uint32],
-    own: float,
-    x_log_x: NDArray[np.float64],
-    statistics: NDArray[np.float64],
-) -> None:
-    # Of those whose table is small. Nothing in here takes a tuple of arrays (see `count_within`).
-    n_planes = n_parts * r_x
-    for i in range(others.shape[0]):
-        y = others[i]
-        if is_wanted[i] and _fits_planes(offsets, n_planes, y):
-            r_y = offsets[y + 1] - offsets[y]
+        statistics[i] = 0.0
+        if is_done or limits[i] == np.inf:
+            continue
+        first = offsets[others[i]]
+        r_y = offsets[others[i] + 1] - first
+        if 0 < n_planes * r_y <= MAX_PLANE_CELLS:  # no tuple of arrays is taken here (see `count_within`)
             for c in range(n_planes * r_y):
                 table[c] = 0
-            count_within(planes, offsets[y], r_y, 0, planes.shape[1], base, base_sizes, n_planes, table)
+            count_within(planes, first, r_y, 0, n_words, base, sizes, n_planes, table)
             statistics[i] = own - _remaining_entropy(table, n_parts, r_x, r_y, x_log_x)
+        else:
+            statistics[i] = conditional_statistic(columns, given, x, others[i], work, is_pearson)
+        is_done = is_first_enough and statistics[i] > limits[i]
 
 
 @inlined

@@ -315,56 +315,68 @@ def _find_blankets(
     method: int,
 ) -> NDArray[np.bool_]:
     p = dependent.shape[0]
-    is_in = np.zeros((p, p), dtype=np.bool_)
-    is_open = np.empty(p, dtype=np.bool_)  # may be looked at
-    kept = np.empty(p, dtype=np.bool_)
-    members = np.empty(p, dtype=np.int64)
-    others = np.empty(p, dtype=np.int64)
-    found = np.empty(p)
+    blankets = np.zeros((p, p), dtype=np.bool_)
     for x in range(p):
-        blanket, own_strength = is_in[x], strength[x]
-        m = 0
-        _mark(dependent[x], is_open, True)
-        for y in range(p):
-            if is_told[x, y]:
-                blanket[y] = True
-                members[m] = y
-                m += 1
-                _mark(dependent[y], is_open, False)
-        last, n_added = -1, 0
-        while True:
-            n_others = 0
-            for y in range(p):
-                others[n_others] = y
-                n_others += is_open[y] and not blanket[y] and y != x
-            if method == GROW_SHRINK:
-                added = _next_dependent(evidence, members[:m], x, others[:n_others], own_strength, last)
-            else:
-                associations(evidence, members[:m], x, others[:n_others], found)
-                added = _most_associated(others[:n_others], found)
-            if added < 0:
-                break
-            blanket[added] = True
-            members[m] = added
-            m += 1
-            _mark(dependent[added], is_open, False)
-            last = added
-            n_added += 1
-            if method == INTER_IAMB:
-                m = _shrink(evidence, x, members, m, blanket, own_strength, is_told[x], others)
-                if _are_equal(blanket, kept) and n_added > 1:
-                    break
-                if n_added & (n_added - 1) == 0:  # a power of 2
-                    _mark(blanket, kept, True)
-        if method != INTER_IAMB:
-            _shrink(evidence, x, members, m, blanket, own_strength, is_told[x], others)
-    return is_in
+        _find_blanket(evidence, x, strength[x], dependent, is_told[x], method, blankets[x])
+    return blankets
 
 
 @inlined
-def _mark(row: NDArray[np.bool_], marks: NDArray[np.bool_], is_new: bool) -> None:
+def _find_blanket(
+    evidence: Evidence,
+    x: int,
+    strength: NDArray[np.float64],
+    dependent: NDArray[np.bool_],
+    is_told: NDArray[np.bool_],
+    method: int,
+    blanket: NDArray[np.bool_],
+) -> None:
+    p = blanket.shape[0]
+    members, others, found = np.empty(p, dtype=np.int64), np.empty(p, dtype=np.int64), np.empty(p)
+    is_open = np.zeros(p, dtype=np.bool_)  # may be looked at
+    kept = np.zeros(p, dtype=np.bool_)
+    _add_marks(dependent[x], is_open)
+    m = 0
+    for y in range(p):
+        if is_told[y]:
+            blanket[y] = True
+            members[m] = y
+            m += 1
+            _add_marks(dependent[y], is_open)
+    newest, n_added = -1, 0
+    while True:
+        n_others = 0
+        for y in range(p):
+            if is_open[y] and not blanket[y] and y != x:
+                others[n_others] = y
+                n_others += 1
+        if method == GROW_SHRINK:
+            _sort_from(others[:n_others], strength, newest)
+        associations(evidence, members[:m], x, others[:n_others], method == GROW_SHRINK, found)
+        added = _most_associated(others[:n_others], found)
+        if added < 0:
+            break
+        newest = added
+        blanket[newest] = True
+        members[m] = newest
+        m += 1
+        _add_marks(dependent[newest], is_open)
+        if method == INTER_IAMB:
+            m = _shrink(evidence, x, strength, is_told, members, m, newest, blanket)
+            n_added += 1
+            if n_added > 1 and _are_equal(blanket, kept):
+                break
+            if n_added & (n_added - 1) == 0:  # a power of 2
+                for v in range(p):
+                    kept[v] = blanket[v]
+    if method != INTER_IAMB:
+        _shrink(evidence, x, strength, is_told, members, m, newest, blanket)
+
+
+@inlined
+def _add_marks(row: NDArray[np.bool_], marks: NDArray[np.bool_]) -> None:
     for v in range(row.shape[0]):
-        marks[v] = row[v] or (marks[v] and not is_new)
+        marks[v] |= row[v]
 
 
 @inlined
@@ -382,29 +394,19 @@ def _is_before(strength: NDArray[np.float64], x: int, y: int) -> bool:
 
 
 @inlined
-def _next_dependent(
-    evidence: Evidence,
-    given: NDArray[np.int64],
-    x: int,
-    others: NDArray[np.int64],
-    strength: NDArray[np.float64],
-    last: int,
-) -> int:
-    # The first that is dependent on x, going round from `last`; -1 if none is.
-    set_base(evidence)
-    y = last
-    for _ in range(others.shape[0]):
-        first, following = -1, -1
-        for v in others:
-            if first < 0 or _is_before(strength, v, first):
-                first = v
-            is_later = y >= 0 and _is_before(strength, y, v)
-            if is_later and (following < 0 or _is_before(strength, v, following)):
-                following = v
-        y = following if following >= 0 else first
-        if is_dependent(evidence, given, x, y):
-            return y
-    return -1
+def _sort_from(others: NDArray[np.int64], strength: NDArray[np.float64], last: int) -> None:
+    # Round the order by strength, beginning after `last`.
+    for i in range(others.shape[0]):
+        y, j = others[i], i
+        is_later = last < 0 or _is_before(strength, last, y)
+        while j > 0:
+            v = others[j - 1]
+            is_v_later = last < 0 or _is_before(strength, last, v)
+            if (is_v_later and not is_later) or (is_v_later == is_later and _is_before(strength, v, y)):
+                break
+            others[j] = v
+            j -= 1
+        others[j] = y
 
 
 @inlined
@@ -421,14 +423,17 @@ def _most_associated(others: NDArray[np.int64], found: NDArray[np.float64]) -> i
 def _shrink(
     evidence: Evidence,
     x: int,
-    members: NDArray[np.int64],
-    m: int,
-    blanket: NDArray[np.bool_],
     strength: NDArray[np.float64],
     is_told: NDArray[np.bool_],
-    rest: NDArray[np.int64],
+    members: NDArray[np.int64],
+    m: int,
+    newest: int,
+    blanket: NDArray[np.bool_],
 ) -> int:
-    # Returns how many members are left. Each turn goes to the weakest of those stronger than the last.
+    # Returns how many members are left. Each turn goes to the weakest of those stronger than the last. That
+    # the newest is dependent given all others is known already.
+    n_before = m
+    rest, one, found = np.empty(m, dtype=np.int64), np.empty(1, dtype=np.int64), np.empty(1)
     last = -1
     while True:
         y = -1
@@ -439,12 +444,15 @@ def _shrink(
         if y < 0:
             return m
         last = y
+        if y == newest and m == n_before:
+            continue
         n_rest = 0
         for i in range(m):
             rest[n_rest] = members[i]
             n_rest += members[i] != y
-        set_base(evidence)
-        if not is_dependent(evidence, rest[:n_rest], x, y):
+        one[0] = y
+        associations(evidence, rest[:n_rest], x, one, True, found)
+        if found[0] == 0.0:
             blanket[y] = False
             m = n_rest
             for i in range(m):
