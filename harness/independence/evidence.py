@@ -6,7 +6,7 @@ at best. The kernels of a learner take either and are compiled for each; they as
 
 - `set_base(evidence)`, whenever the conditioning set or x changes;
 - `is_dependent(evidence, given, x, y, at_least)`;
-- `association(evidence, given, x, y)`;
+- `associations(...)`, of x and many others at once;
 - `find_lower_bounds(...)`, of what `at_least` takes.
 
 *Association* puts the strengths of dependences with different degrees of freedom on one scale. It is 0
@@ -45,7 +45,9 @@ from harness.independence.statistics import (
     ROUNDING,
     StatisticWorkspace,
     conditional_statistic,
+    conditional_statistics_with,
     dependent_pairs,
+    entropy_ceiling,
     pair_statistics,
     statistic_ceilings,
     statistic_workspace,
@@ -280,45 +282,97 @@ def _is_dependent(evidence: Any, given: Any, x: Any, y: Any, at_least: Any) -> A
     return of_data if _is(evidence, DataTests) else of_graph
 
 
-def association(evidence: Evidence, given: NDArray[np.int64], x: int, y: int) -> float:
-    """Say how strongly x and y are associated given others: 0 if they are not found dependent.
+def associations(
+    evidence: Evidence,
+    given: NDArray[np.int64],
+    x: int,
+    others: NDArray[np.int64],
+    is_first_enough: bool,
+    found: NDArray[np.float64],
+) -> None:
+    """Say how strongly x and each of others are associated given some: 0 where not found dependent.
+
+    `set_base` need not be called before; it must be after.
 
     Parameters
     ----------
     evidence : DataTests or Separations
         From the latter, 1 for every dependence.
     given : int64 array, shape (k,)
-    x, y : int
+    x : int
+    others : int64 array, shape (m,)
+        Neither x nor given.
+    is_first_enough : bool
+        Whether all that come after the first that is associated are passed over, as if they were not.
+    found : float64 array, shape (at least m,)
+        Filled.
     """
     raise NotImplementedError("only kernels call this")
 
 
-@_compiled_for(association)
-def _association(evidence: Any, given: Any, x: Any, y: Any) -> Any:
-    def of_data(evidence: DataTests, given: NDArray[np.int64], x: int, y: int) -> float:
-        sizes = evidence.cardinalities
-        df = np.float64(sizes[x] - 1) * np.float64(sizes[y] - 1)
+@_compiled_for(associations)
+def _associations(evidence: Any, given: Any, x: Any, others: Any, is_first_enough: Any, found: Any) -> Any:
+    def of_data(
+        evidence: DataTests,
+        given: NDArray[np.int64],
+        x: int,
+        others: NDArray[np.int64],
+        is_first_enough: bool,
+        found: NDArray[np.float64],
+    ) -> None:
+        m, sizes, statistics = others.shape[0], evidence.cardinalities, evidence.statistics[x]
+        evidence.work.parts[:] = 0
+        factor = np.float64(sizes[x] - 1)
         for v in given:
-            df *= sizes[v]
-        if df == 0:
-            return 0.0
+            factor *= sizes[v]
+        is_done = False
         if evidence.kind == PERMUTATION:
-            n_as_large, deviate = deal_out(evidence.columns, given, x, y, evidence.work, evidence.draws)
-            return max(deviate, LEAST_ASSOCIATION) if n_as_large <= evidence.draws.n_allowed else 0.0
-        limit = critical_value(evidence.critical, df)
-        if limit >= min(evidence.ceilings[x], evidence.ceilings[y]):
-            return 0.0
-        if given.shape[0] == 0:
-            statistic = evidence.statistics[x, y]
-        else:
+            for i in range(m):
+                found[i] = 0.0
+                if not is_done and factor * (sizes[others[i]] - 1) > 0:
+                    n_as_large, deviate = deal_out(
+                        evidence.columns, given, x, others[i], evidence.work, evidence.draws
+                    )
+                    if n_as_large <= evidence.draws.n_allowed:
+                        found[i] = max(deviate, LEAST_ASSOCIATION)
+                        is_done = is_first_enough
+            return
+        ceiling = evidence.ceilings[x]
+        if evidence.kind == G2 and given.shape[0] > 0:
+            ceiling = min(ceiling, entropy_ceiling(evidence.columns, given, x, evidence.work))
+        limits = np.empty(m)
+        for i in range(m):
+            y, df = others[i], factor * (sizes[others[i]] - 1)
+            limit = critical_value(evidence.critical, df) if df > 0 else np.inf
+            limits[i] = limit + ROUNDING if limit < min(ceiling, evidence.ceilings[y]) else np.inf
+            found[i] = statistics[y]
+        if given.shape[0] > 0:
             is_pearson = evidence.kind == PEARSON
-            statistic = conditional_statistic(evidence.columns, given, x, y, evidence.work, is_pearson)
-        if statistic <= limit + ROUNDING:
-            return 0.0
-        return max(deviates_beyond(statistic, limit, df), LEAST_ASSOCIATION)
+            conditional_statistics_with(
+                evidence.columns, given, x, others, limits, is_first_enough, evidence.work, is_pearson, found
+            )
+        for i in range(m):
+            if found[i] > limits[i] and not is_done:
+                df = factor * (sizes[others[i]] - 1)
+                found[i] = max(deviates_beyond(found[i], limits[i] - ROUNDING, df), LEAST_ASSOCIATION)
+                is_done = is_first_enough
+            else:
+                found[i] = 0.0
 
-    def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int) -> float:
-        return 1.0 if is_dependent(evidence, given, x, y, 0.0) else 0.0
+    def of_graph(
+        evidence: Separations,
+        given: NDArray[np.int64],
+        x: int,
+        others: NDArray[np.int64],
+        is_first_enough: bool,
+        found: NDArray[np.float64],
+    ) -> None:
+        is_done = False
+        for i in range(others.shape[0]):
+            found[i] = 0.0
+            if not is_done and is_dependent(evidence, given, x, others[i], 0.0):
+                found[i] = 1.0
+                is_done = is_first_enough
 
     return of_data if _is(evidence, DataTests) else of_graph
 

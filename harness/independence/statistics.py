@@ -24,6 +24,7 @@ from harness.counts import (
     Columns,
     Workspace,
     append_column,
+    count_within,
     index_rows,
     prepare,
     split_planes,
@@ -173,6 +174,8 @@ class StatisticWorkspace(NamedTuple):
     parts : int64 array, shape (2,)
         How many joint states the base that stands in `space` has: on planes, by index. 0: not made yet;
         -1: cannot be made.
+    own : float64 array, shape (2,)
+        2 n times the entropy of x given the others, for the two kinds of base alike; NaN: not known yet.
     x_log_x : float64 array, shape (n + 1,)
         m log m for each count m.
     margin : uint32 array, shape (max states,)
@@ -180,6 +183,7 @@ class StatisticWorkspace(NamedTuple):
 
     space: Workspace
     parts: NDArray[np.int64]
+    own: NDArray[np.float64]
     x_log_x: NDArray[np.float64]
     margin: NDArray[np.uint32]
 
@@ -190,6 +194,7 @@ def statistic_workspace(columns: Columns) -> StatisticWorkspace:
     return StatisticWorkspace(
         space=workspace(columns),
         parts=np.zeros(2, dtype=np.int64),
+        own=np.full(2, np.nan),
         x_log_x=counts * np.log(np.maximum(counts, 1)),
         margin=np.empty(int(columns.cardinalities.max(initial=1)), dtype=np.uint32),
     )
@@ -216,15 +221,115 @@ def conditional_statistic(
     r_x, r_y = columns.cardinalities[x], columns.cardinalities[y]
     space, parts = work.space, work.parts
     if parts[0] == 0:
-        parts[0] = split_planes(columns, given, x, space)
+        _make_planes(columns, given, x, work)
     if 0 < parts[0] * r_x * r_y <= MAX_PLANE_CELLS and tabulate_planes(columns, y, parts[0] * r_x, space):
-        return _table_statistic(parts[0], r_x, r_y, work, is_pearson)
+        return _table_statistic(0, r_x, r_y, work, is_pearson)
     if parts[1] == 0:
-        parts[1] = _number_rows(columns, given, x, space)
+        _make_index(columns, given, x, work)
     if tabulate_index(columns, y, parts[1] * r_x, space):
-        return _table_statistic(parts[1], r_x, r_y, work, is_pearson)
+        return _table_statistic(1, r_x, r_y, work, is_pearson)
     parts[1] = 0  # what follows overwrites the index
     return _statistic_by_row(columns, given, x, y, space, is_pearson)
+
+
+@inlined
+def entropy_ceiling(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> float:
+    """Compute 2 n times the entropy of x given others: G2 of x and anything else given them is at most that.
+
+    Parameters are those of `conditional_statistic`.
+
+    Returns
+    -------
+    float
+        Infinity where it would take too long.
+    """
+    r_x, space = columns.cardinalities[x], work.space
+    if work.parts[0] == 0:
+        _make_planes(columns, given, x, work)
+    if work.parts[0] > 0:
+        return float(work.own[0])
+    if work.parts[1] == 0:
+        _make_index(columns, given, x, work)
+    n_cells = work.parts[1] * r_x
+    if np.isnan(work.own[1]):
+        if n_cells > space.table.shape[0]:
+            return np.inf
+        for c in range(n_cells):
+            space.table[c] = 0
+        for number in space.index:
+            space.table[number] += np.uint32(1)
+        work.own[1] = _own_entropy(space.table, work.parts[1], r_x, 1, work.x_log_x)
+    return float(work.own[1])
+
+
+@inlined
+def conditional_statistics_with(
+    columns: Columns,
+    given: NDArray[np.int64],
+    x: int,
+    others: NDArray[np.int64],
+    limits: NDArray[np.float64],
+    is_first_enough: bool,
+    work: StatisticWorkspace,
+    is_pearson: bool,
+    statistics: NDArray[np.float64],
+) -> None:
+    """Compute the statistics of x and each of many variables given others.
+
+    Parameters
+    ----------
+    columns : Columns
+    given : int64 array, shape (k,)
+    x : int
+    others : int64 array, shape (m,)
+    limits : float64 array, shape (m,)
+        Where infinite, nothing is computed.
+    is_first_enough : bool
+        Whether nothing is computed after the first statistic above its limit.
+    work : StatisticWorkspace
+        As for `conditional_statistic`.
+    is_pearson : bool
+        X2 if true, else G2.
+    statistics : float64 array, shape (at least m,)
+        Filled; 0 for what is not computed.
+    """
+    if work.parts[0] == 0:
+        _make_planes(columns, given, x, work)
+    planes, offsets, n_words = columns.planes, columns.offsets, columns.planes.shape[1]
+    base, sizes, table = work.space.base, work.space.base_sizes, work.space.table
+    x_log_x, own = work.x_log_x, work.own[0]
+    n_parts, r_x = work.parts[0], columns.cardinalities[x]
+    n_planes = 0 if is_pearson else n_parts * r_x
+    is_done = False
+    for i in range(others.shape[0]):
+        statistics[i] = 0.0
+        if is_done or limits[i] == np.inf:
+            continue
+        first = offsets[others[i]]
+        r_y = offsets[others[i] + 1] - first
+        if 0 < n_planes * r_y <= MAX_PLANE_CELLS:  # no tuple of arrays is taken here (see `count_within`)
+            for c in range(n_planes * r_y):
+                table[c] = 0
+            count_within(planes, first, r_y, 0, n_words, base, sizes, n_planes, table)
+            statistics[i] = own - _remaining_entropy(table, n_parts, r_x, r_y, x_log_x)
+        else:
+            statistics[i] = conditional_statistic(columns, given, x, others[i], work, is_pearson)
+        is_done = is_first_enough and statistics[i] > limits[i]
+
+
+@inlined
+def _make_planes(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> None:
+    n_parts = split_planes(columns, given, x, work.space)
+    work.parts[0] = n_parts
+    if n_parts > 0:
+        r_x = columns.cardinalities[x]
+        work.own[0] = _own_entropy(work.space.base_sizes, n_parts, r_x, 1, work.x_log_x)
+
+
+@inlined
+def _make_index(columns: Columns, given: NDArray[np.int64], x: int, work: StatisticWorkspace) -> None:
+    work.parts[1] = _number_rows(columns, given, x, work.space)
+    work.own[1] = np.nan
 
 
 @inlined
@@ -244,34 +349,64 @@ def _number_rows(columns: Columns, given: NDArray[np.int64], x: int, space: Work
 
 
 @inlined
-def _table_statistic(n_parts: int, r_x: int, r_y: int, work: StatisticWorkspace, is_pearson: bool) -> float:
-    total = 0.0
-    for c in range(n_parts):
-        part = work.space.table[c * r_x * r_y : (c + 1) * r_x * r_y]
-        total += (
-            _x2_part(part, r_x, r_y, work.margin) if is_pearson else _g2_part(part, r_x, r_y, work.x_log_x)
-        )
-    return total
+def _table_statistic(kind: int, r_x: int, r_y: int, work: StatisticWorkspace, is_pearson: bool) -> float:
+    # Of the table that stands in `work`, counted on a base of the given kind (0: planes, 1: index).
+    n_parts, table = work.parts[kind], work.space.table
+    if is_pearson:
+        total = 0.0
+        for c in range(n_parts):
+            total += _x2_part(table[c * r_x * r_y : (c + 1) * r_x * r_y], r_x, r_y, work.margin)
+        return total
+    # G2 is 2 n times an entropy of x given the conditioning variables, less that given y as well.
+    if np.isnan(work.own[kind]):
+        work.own[kind] = _own_entropy(table, n_parts, r_x, r_y, work.x_log_x)
+    return float(work.own[kind] - _remaining_entropy(table, n_parts, r_x, r_y, work.x_log_x))
 
 
 @inlined
-def _g2_part(part: NDArray[np.uint32], r_x: int, r_y: int, x_log_x: NDArray[np.float64]) -> float:
+def _own_entropy(
+    table: NDArray[np.uint32], n_parts: int, r_x: int, r_y: int, x_log_x: NDArray[np.float64]
+) -> float:
+    # 2 n times the entropy of x given the part.
     total = 0.0
-    size = np.uint32(0)
-    for x in range(r_x):
-        row = part[x * r_y : (x + 1) * r_y]
-        row_size = np.uint32(0)
+    for c in range(n_parts):
+        size = np.uint32(0)
+        for x in range(c * r_x, (c + 1) * r_x):
+            row_size = np.uint32(0)
+            for cell in table[x * r_y : (x + 1) * r_y]:
+                row_size += cell
+            total -= x_log_x[row_size]
+            size += row_size
+        total += x_log_x[size]
+    return 2 * total
+
+
+@inlined
+def _remaining_entropy(
+    table: NDArray[np.uint32], n_parts: int, r_x: int, r_y: int, x_log_x: NDArray[np.float64]
+) -> float:
+    # 2 n times the entropy of x given the part and y. Four sums take turns, so that one addition need not
+    # wait for the last.
+    n_cells = n_parts * r_x * r_y
+    a, b, c, d = 0.0, 0.0, 0.0, 0.0
+    fours = n_cells // 4 * 4
+    for i in range(0, fours, 4):
+        four = table[i : i + 4]
+        a += x_log_x[four[0]]
+        b += x_log_x[four[1]]
+        c += x_log_x[four[2]]
+        d += x_log_x[four[3]]
+    for i in range(fours, n_cells):
+        a += x_log_x[table[i]]
+    total = 0.0
+    for i in range(n_parts):
+        part = table[i * r_x * r_y : (i + 1) * r_x * r_y]
         for y in range(r_y):
-            row_size += row[y]
-            total += x_log_x[row[y]]
-        total -= x_log_x[row_size]
-        size += row_size
-    for y in range(r_y):
-        column_size = np.uint32(0)
-        for x in range(r_x):
-            column_size += part[x * r_y + y]
-        total -= x_log_x[column_size]
-    return float(2 * (total + x_log_x[size]))
+            column_size = np.uint32(0)
+            for x in range(r_x):
+                column_size += part[x * r_y + y]
+            total += x_log_x[column_size]
+    return 2 * (total - (a + b + c + d))
 
 
 @inlined

@@ -17,6 +17,9 @@ BUILT_IN: Mapping[str, str] = MappingProxyType(
         "pairwise": "harness.learners.marginal:pairwise",
         "chow-liu": "harness.learners.marginal:chow_liu",
         "pc": "harness.learners.constraint:pc",
+        "grow-shrink": "harness.learners.blankets:grow_shrink",
+        "iamb": "harness.learners.blankets:iamb",
+        "inter-iamb": "harness.learners.blankets:inter_iamb",
         "hill-climbing": "harness.learners.greedy_dag:hill_climbing",
         "mmhc": "harness.learners.max_min:mmhc",
     }

@@ -24,7 +24,7 @@ from harness.family_scores import Score
 from harness.independence.evidence import (
     Evidence,
     Test,
-    association,
+    associations,
     data_tests,
     is_dependent,
     marginally_dependent,
@@ -167,19 +167,21 @@ def _grow_and_shrink(
     # [x, y]: y is among the neighbours of x, as far as x can tell.
     p = dependent.shape[0]
     is_neighbour = np.zeros((p, p), dtype=np.bool_)
-    neighbours = np.empty(p, dtype=np.int64)
+    neighbours, others, found = np.empty(p, dtype=np.int64), np.empty(p, dtype=np.int64), np.empty(p)
     least = np.empty(p)
     for x in range(p):
-        nothing = neighbours[:0]
-        set_base(evidence)
-        n = 0
+        n, n_others = 0, 0
         for y in range(p):
             least[y] = 0.0
             if is_told[x, y]:
                 neighbours[n] = y
                 n += 1
             elif dependent[x, y]:
-                least[y] = association(evidence, nothing, x, y)
+                others[n_others] = y
+                n_others += 1
+        associations(evidence, neighbours[:0], x, others[:n_others], False, found)
+        for i in range(n_others):
+            least[others[i]] = found[i]
         for k in range(1, n + 1):
             _lower(evidence, x, neighbours[:k], most, max_cells, least)
         best = _greatest(least)
@@ -220,22 +222,23 @@ def _lower(
 ) -> None:
     # Takes in the associations given all sets of the neighbours that the last of them is in.
     last = neighbours.shape[0] - 1
-    n_left = 0
-    for y in range(least.shape[0]):
-        n_left += least[y] > 0
+    others, found = np.empty(least.shape[0], dtype=np.int64), np.empty(least.shape[0])
     for size in range(min(last + 1, most)):
         chosen, given = np.arange(size), np.empty(size + 1, dtype=np.int64)
         given[size] = neighbours[last]
         changed = 0
-        while changed >= 0 and n_left > 0:
+        while changed >= 0:
             for j in range(size):
                 given[j] = neighbours[chosen[j]]
-            set_base(evidence)
             cells = _cells(evidence.cardinalities, x, given)
+            m = 0
             for y in range(least.shape[0]):
                 if least[y] > 0 and cells * evidence.cardinalities[y] <= max_cells:
-                    least[y] = min(least[y], association(evidence, given, x, y))
-                    n_left -= least[y] == 0
+                    others[m] = y
+                    m += 1
+            associations(evidence, given, x, others[:m], False, found)
+            for i in range(m):
+                least[others[i]] = min(least[others[i]], found[i])
             changed = next_combination(chosen, size - 1, last)
 
 

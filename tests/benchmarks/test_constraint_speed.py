@@ -17,6 +17,7 @@ import pytest
 from generators.cpts import generate_network
 from generators.dataset import Dataset
 from generators.topologies import generate_graph
+from harness.learners.blankets import grow_shrink, iamb, inter_iamb
 from harness.learners.constraint import pc
 from harness.learners.marginal import chow_liu, pairwise
 from harness.learners.max_min import mmhc
@@ -69,6 +70,9 @@ OTHERS = {
     "pc conservative": functools.partial(pc, colliders="conservative"),
     "pc majority": functools.partial(pc, colliders="majority"),
     "pc at once": functools.partial(pc, updates="at-once"),
+    "grow-shrink": grow_shrink,
+    "iamb": iamb,
+    "inter-iamb": inter_iamb,
     "mmhc": mmhc,
 }
 
@@ -101,7 +105,7 @@ def test_permutations(benchmark: Any) -> None:
     benchmark.extra_info["ratio_to_pc"] = benchmark.stats.stats.min / seconds(lambda: pc(data))
 
 
-@pytest.mark.parametrize("method", ["pc", "mmhc"])
+@pytest.mark.parametrize("method", ["pc", "iamb", "mmhc"])
 @pytest.mark.parametrize(
     ("p", "n", "factor"),
     [(100, 1_000, (2, 1)), (400, 1_000, (2, 1)), (100, 1_000, (1, 4)), (100, 8_000, (1, 4))],
