@@ -14,6 +14,7 @@ import pytest
 
 from generators.catalogue import published_network
 from generators.graph import Graph
+from harness.learners.builtin import BUILT_IN, built_in
 from harness.plan.recipes import dataset_key, draw_network, network_key
 from harness.plan.schema import read_plan
 from harness.plan.telling import rounded, told
@@ -120,6 +121,23 @@ def test_exclusions_are_the_truth_too(study: Study) -> None:
     left = runs[(runs["knowledge"] == ALL) & (runs["label"] == "allows")]["graph"].tolist()
 
     assert right == left
+
+
+def test_built_in_learners_are_told_too(tmp_path: Path) -> None:
+    """Told every arc and every pair without one, built-in learners that listen have the truth."""
+    takers = [name for name in BUILT_IN if built_in(name).takes_knowledge]
+    head = "[networks]\nvariables = [6, 9]\nreplicates = 3\n[data]\nrows = 30\n"
+    learners = "".join(f"[[learner]]\nmethod = '{name}'\n" for name in takers)
+    plan = tmp_path / "plan.toml"
+    plan.write_text(head + "knowledge = {arcs = 1.0, excluded = 1.0}\n" + learners)
+
+    run_plan(plan, n_workers=2)
+
+    runs = runs_table(read_study(tmp_path / "plan.ledger"))
+    assert len(runs) == 6 * len(takers) >= 36
+    assert set(runs["status"]) == {"done"}
+    assert set(runs["class_shd"]) == {0.0}
+    assert set(runs["perfect_map"]) == {1.0}
 
 
 def test_wrong_statements_cost_what_they_must(study: Study) -> None:
