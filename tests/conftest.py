@@ -18,6 +18,21 @@ settings.load_profile("project")
 ROOT = Path(__file__).parent.parent
 
 
+def pytest_sessionstart(session: pytest.Session) -> None:
+    """Share the compilation of the kernels between the processes of a parallel run.
+
+    Each would else compile most of them by itself, at the same time as the others.
+    """
+    if hasattr(session.config, "workerinput"):
+        import harness.scorers.structure  # noqa: F401  (registers its warm-up)
+        from generators.compiled import warm_all
+        from harness.learners.builtin import BUILT_IN, built_in
+
+        for name in BUILT_IN:
+            built_in(name)
+        warm_all()
+
+
 @pytest.fixture
 def rng() -> np.random.Generator:
     """Give a generator with a fixed seed."""
