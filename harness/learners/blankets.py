@@ -558,7 +558,7 @@ def _find_separating(
             for j in range(k):
                 given[j] = members[chosen[j]]
             set_base(evidence)
-            if not is_dependent(evidence, given, x, y):
+            if not is_dependent(evidence, given, x, y, 0.0):
                 return k
             changed = next_combination(chosen, k - 1, m)
     return -1
