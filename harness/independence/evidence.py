@@ -33,7 +33,7 @@ from numpy.typing import NDArray
 
 from generators.adjacency import Nodes, Offsets
 from generators.classes import dag_class_lists
-from generators.compiled import kernel, warm_up
+from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
@@ -319,8 +319,7 @@ def _association(evidence: Any, given: Any, x: Any, y: Any) -> Any:
             statistic = conditional_statistic(evidence.columns, given, x, y, evidence.work, is_pearson)
         if statistic <= limit + ROUNDING:
             return 0.0
-        roots = np.cbrt(statistic / df) - np.cbrt(limit / df)
-        return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
+        return _excess(statistic, limit, df)
 
     def of_graph(evidence: Separations, given: NDArray[np.int64], x: int, y: int) -> float:
         return 1.0 if is_dependent(evidence, given, x, y) else 0.0
@@ -399,9 +398,7 @@ def _associations(evidence: Any, given: Any, x: Any, others: Any, is_first_enoug
             )
         for i in range(m):
             if found[i] > limits[i] and not is_done:
-                df = factor * (sizes[others[i]] - 1)
-                roots = np.cbrt(found[i] / df) - np.cbrt((limits[i] - ROUNDING) / df)
-                found[i] = max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION)
+                found[i] = _excess(found[i], limits[i] - ROUNDING, factor * (sizes[others[i]] - 1))
                 is_done = is_first_enough
             else:
                 found[i] = 0.0
@@ -420,6 +417,12 @@ def _associations(evidence: Any, given: Any, x: Any, others: Any, is_first_enoug
             is_done |= is_first_enough and found[i] > 0.0
 
     return of_data if _is(evidence, DataTests) else of_graph
+
+
+@inlined
+def _excess(statistic: float, limit: float, df: float) -> float:
+    roots = np.cbrt(statistic / df) - np.cbrt(limit / df)
+    return float(max(math.sqrt(4.5 * df) * roots, LEAST_ASSOCIATION))
 
 
 def find_lower_bounds(
