@@ -338,7 +338,7 @@ def _associations(evidence: Any, given: Any, x: Any, others: Any, is_first_enoug
                         is_done = is_first_enough
             return
         ceiling = evidence.ceilings[x]
-        if evidence.kind == G2 and given.shape[0] > 0:
+        if evidence.kind == G2 and given.shape[0] > 0 and m > 1:  # for one it would cost a test to spare it
             ceiling = min(ceiling, entropy_ceiling(evidence.columns, given, x, evidence.work))
         limits = np.empty(m)
         for i in range(m):

@@ -18,10 +18,11 @@ B shrinks by looking at its members once, in ascending order of their statistic 
 independent of x given the others that are left. Statistics and associations that agree to six decimals are
 equal; of equal ones the greater is that of the earlier column.
 
-Only variables that are marginally dependent on x, or on one that is or was in B, are looked at. The papers
-look at all. But under faithfulness, which they assume, members of the blanket are neighbours of x or of its
-neighbours, and neighbours are dependent whatever is conditioned on. So no member is missed; on finite data
-fewer are taken in by chance, of some hundred variables that have nothing to do with x.
+Only variables that are marginally dependent on x are looked at, and those that are dependent on one that
+stands or stood in B, marginally and given x. The papers look at all variables. But under faithfulness, which
+they assume, members of the blanket are neighbours of x or of a neighbour of x, and neighbours are dependent
+whatever is conditioned on. So no member is missed; and on finite data, fewer of the many variables that have
+nothing to do with x are taken in by chance.
 
 *Neighbours*, after Margaritis and Thrun (1999). Variables x and y that stand in each other's blankets are
 neighbours if they are dependent given each subset of the smaller of B(x) without y and B(y) without x; of two
@@ -337,16 +338,15 @@ def _find_blanket(
 ) -> None:
     p = blanket.shape[0]
     members, others, found = np.empty(p, dtype=np.int64), np.empty(p, dtype=np.int64), np.empty(p)
-    is_open = np.zeros(p, dtype=np.bool_)  # may be looked at
+    is_open = dependent[x].copy()  # may be looked at
     kept = np.zeros(p, dtype=np.bool_)
-    _add_marks(dependent[x], is_open)
     m = 0
     for y in range(p):
         if is_told[y]:
             blanket[y] = True
             members[m] = y
             m += 1
-            _add_marks(dependent[y], is_open)
+            _open_around(evidence, x, y, dependent[y], is_open, others, found)
     newest, n_added = -1, 0
     while True:
         n_others = 0
@@ -364,7 +364,7 @@ def _find_blanket(
         blanket[newest] = True
         members[m] = newest
         m += 1
-        _add_marks(dependent[newest], is_open)
+        _open_around(evidence, x, newest, dependent[newest], is_open, others, found)
         if method == INTER_IAMB:
             m = _shrink(evidence, x, strength, is_told, members, m, newest, blanket)
             n_added += 1
@@ -378,9 +378,26 @@ def _find_blanket(
 
 
 @inlined
-def _add_marks(row: NDArray[np.bool_], marks: NDArray[np.bool_]) -> None:
-    for v in range(row.shape[0]):
-        marks[v] |= row[v]
+def _open_around(
+    evidence: Evidence,
+    x: int,
+    member: int,
+    dependent: NDArray[np.bool_],
+    is_open: NDArray[np.bool_],
+    others: NDArray[np.int64],
+    found: NDArray[np.float64],
+) -> None:
+    # Opens what is dependent on a member marginally and given x.
+    n_others = 0
+    for y in range(dependent.shape[0]):
+        if dependent[y] and not is_open[y] and y != x:
+            others[n_others] = y
+            n_others += 1
+    given = np.empty(1, dtype=np.int64)
+    given[0] = x
+    associations(evidence, given, member, others[:n_others], False, found)
+    for i in range(n_others):
+        is_open[others[i]] = found[i] > 0.0
 
 
 @inlined

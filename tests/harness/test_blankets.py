@@ -242,14 +242,17 @@ class PlainBlankets:
                 self.n_removed += 1
         return members
 
+    def around(self, x: int, y: int) -> set[int]:
+        """Return what is dependent on y, marginally and given x."""
+        related = np.flatnonzero(self.related[y]).tolist()
+        return {v for v in related if v != x and self.association(v, y, (x,)) > 0}
+
     def blanket(self, x: int) -> list[int]:
         members = np.flatnonzero(self.told[x]).tolist()
-        been = {x, *members}
+        looked_at = set(np.flatnonzero(self.related[x])).union(*(self.around(x, y) for y in members))
         last, kept, n_added = -1, None, 0
         while True:
-            others = [
-                y for y in range(self.p) if y != x and y not in members and self.related[list(been), y].any()
-            ]
+            others = sorted(looked_at - {x, *members})
             joining = -1
             if self.method == "grow-shrink":
                 order = self.in_order(x, [*others, *([last] if last >= 0 else [])])
@@ -263,7 +266,7 @@ class PlainBlankets:
             if joining < 0:
                 break
             members, last, n_added = [*members, joining], joining, n_added + 1
-            been.add(joining)
+            looked_at |= self.around(x, joining)
             if self.method == "inter-iamb":
                 members = self.shrunk(x, members)
                 if set(members) == kept:
