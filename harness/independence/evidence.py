@@ -9,6 +9,8 @@ at best. The kernels of a learner take either and are compiled for each; they as
 - `associations(...)`, of x and many others at once;
 - `find_lower_bounds(...)`, of what `at_least` takes.
 
+They ask from `inlined` functions only: numba compiles the answer anew for callers with other options.
+
 *Association* puts the strengths of dependences with different degrees of freedom on one scale. It is 0
 where a test does not find x and y dependent. Else it says how far the statistic is beyond its critical
 value, in standard normal deviates (`deviates_beyond`): the smaller p-value has the greater association,
@@ -28,7 +30,7 @@ from numpy.typing import NDArray
 
 from generators.adjacency import Nodes, Offsets
 from generators.classes import dag_class_lists
-from generators.compiled import kernel, warm_up
+from generators.compiled import inlined, kernel, warm_up
 from generators.dataset import Dataset
 from generators.errors import InputError
 from generators.graph import Graph
@@ -451,10 +453,17 @@ def _marginally_dependent(evidence: Evidence) -> NDArray[np.bool_]:
     dependent = np.zeros((p, p), dtype=np.bool_)
     nothing = np.empty(0, dtype=np.int64)
     for x in range(p):
-        set_base(evidence)
-        for y in range(x + 1, p):
-            dependent[x, y] = dependent[y, x] = is_dependent(evidence, nothing, x, y, 0.0)
+        _mark_dependent(evidence, nothing, x, dependent)
     return dependent
+
+
+@inlined
+def _mark_dependent(
+    evidence: Evidence, nothing: NDArray[np.int64], x: int, dependent: NDArray[np.bool_]
+) -> None:
+    set_base(evidence)
+    for y in range(x + 1, dependent.shape[0]):
+        dependent[x, y] = dependent[y, x] = is_dependent(evidence, nothing, x, y, 0.0)
 
 
 @warm_up

@@ -115,8 +115,8 @@ def grow_shrink(
 
     Notes
     -----
-    Unlike the paper's, the search leaves out variables that are marginally dependent neither on the one whose
-    blanket is sought nor on any that was taken in: see the top of `harness.learners.blankets`.
+    Unlike the paper's, the search leaves out variables that are dependent neither on the one whose blanket is
+    sought nor on any that was taken in: see the top of `harness.learners.blankets`.
 
     Both ends must find each other, so that errors in one blanket are made good by the other, at the cost
     of arcs that are missed.

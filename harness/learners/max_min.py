@@ -167,39 +167,52 @@ def _grow_and_shrink(
     # [x, y]: y is among the neighbours of x, as far as x can tell.
     p = dependent.shape[0]
     is_neighbour = np.zeros((p, p), dtype=np.bool_)
-    neighbours, others, found = np.empty(p, dtype=np.int64), np.empty(p, dtype=np.int64), np.empty(p)
-    least = np.empty(p)
     for x in range(p):
-        n, n_others = 0, 0
-        for y in range(p):
-            least[y] = 0.0
-            if is_told[x, y]:
-                neighbours[n] = y
-                n += 1
-            elif dependent[x, y]:
-                others[n_others] = y
-                n_others += 1
-        associations(evidence, neighbours[:0], x, others[:n_others], False, found)
-        for i in range(n_others):
-            least[others[i]] = found[i]
-        for k in range(1, n + 1):
-            _lower(evidence, x, neighbours[:k], most, max_cells, least)
-        best = _greatest(least)
-        while best >= 0:
-            least[best] = 0.0
-            neighbours[n] = best
-            n += 1
-            _lower(evidence, x, neighbours[:n], most, max_cells, least)
-            best = _greatest(least)
-        for k in range(n - 1, -1, -1):
-            y = neighbours[k]
-            if not is_told[x, y] and _is_explained(evidence, x, k, neighbours[:n], most, max_cells):
-                for j in range(k, n - 1):
-                    neighbours[j] = neighbours[j + 1]
-                n -= 1
-        for y in neighbours[:n]:
-            is_neighbour[x, y] = True
+        _find_neighbours(evidence, x, dependent[x], is_told[x], most, max_cells, is_neighbour[x])
     return is_neighbour
+
+
+@inlined
+def _find_neighbours(
+    evidence: Evidence,
+    x: int,
+    dependent: NDArray[np.bool_],
+    is_told: NDArray[np.bool_],
+    most: int,
+    max_cells: float,
+    is_neighbour: NDArray[np.bool_],
+) -> None:
+    p = dependent.shape[0]
+    neighbours, others, found = np.empty(p, dtype=np.int64), np.empty(p, dtype=np.int64), np.empty(p)
+    least = np.zeros(p)
+    n, n_others = 0, 0
+    for y in range(p):
+        if is_told[y]:
+            neighbours[n] = y
+            n += 1
+        elif dependent[y]:
+            others[n_others] = y
+            n_others += 1
+    associations(evidence, neighbours[:0], x, others[:n_others], False, found)
+    for i in range(n_others):
+        least[others[i]] = found[i]
+    for k in range(1, n + 1):
+        _lower(evidence, x, neighbours[:k], most, max_cells, least)
+    best = _greatest(least)
+    while best >= 0:
+        least[best] = 0.0
+        neighbours[n] = best
+        n += 1
+        _lower(evidence, x, neighbours[:n], most, max_cells, least)
+        best = _greatest(least)
+    for k in range(n - 1, -1, -1):
+        y = neighbours[k]
+        if not is_told[y] and _is_explained(evidence, x, k, neighbours[:n], most, max_cells):
+            for j in range(k, n - 1):
+                neighbours[j] = neighbours[j + 1]
+            n -= 1
+    for y in neighbours[:n]:
+        is_neighbour[y] = True
 
 
 @inlined

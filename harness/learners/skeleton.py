@@ -192,6 +192,21 @@ def _separate(
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], bool]:
     # One level: takes from `adjacent` the pairs that sets of n_given neighbours separate. Returns these
     # pairs (x p + y for x < y), what separated them, and whether there was any test to make.
+    return _try_level(evidence, strength, order, n_given, adjacent, is_told, may_explain, max_cells, at_once)
+
+
+@inlined
+def _try_level(
+    evidence: Evidence,
+    strength: NDArray[np.float64],
+    order: NDArray[np.int64],
+    n_given: int,
+    adjacent: NDArray[np.bool_],
+    is_told: NDArray[np.bool_],
+    may_explain: NDArray[np.bool_],
+    max_cells: float,
+    at_once: bool,
+) -> tuple[NDArray[np.int64], NDArray[np.int64], bool]:
     p = adjacent.shape[0]
     sizes = evidence.cardinalities
     at, nodes = neighbour_lists(adjacent)
