@@ -173,7 +173,7 @@ def _watch(runner: Watched, limits: Limits) -> Observed:
 def _wait(runner: Watched, limits: Limits, n_running: list[int]) -> Observed:
     """Look at the runner until it has its answer, is gone, or is over a limit."""
     pool: set[int] | None = None  # known when the job begins
-    held_before = memory.resident_mb([runner.pid])  # by the caller too: a fork shares it all
+    held_before = memory.resident_mb([runner.pid])  # by the caller too: every fork shares it all
     end = time.monotonic() + LOADING_SECONDS
     while True:
         ready = {file for file, _ in runner.poll.poll(ceil(1000 * LOOK_SECONDS))}
@@ -193,7 +193,7 @@ def _wait(runner: Watched, limits: Limits, n_running: list[int]) -> Observed:
             family = processes.with_descendants([runner.pid])
             if pool is not None:
                 n_running += _running(family, pool)
-            if memory.resident_mb(family) - held_before > limits.memory_mb:
+            if memory.resident_mb(family) - held_before * len(family) > limits.memory_mb:
                 return Observed(Status.OUT_OF_MEMORY, f"it took more than {limits.memory_mb} MB of memory")
         if time.monotonic() > end:
             return Observed(Status.TIMEOUT, f"no answer within {limits.seconds:g} s")
