@@ -240,6 +240,7 @@ def _lower(
         chosen, given = np.arange(size), np.empty(size + 1, dtype=np.int64)
         given[size] = neighbours[last]
         changed = 0
+        n_tests = 0
         while changed >= 0:
             for j in range(size):
                 given[j] = neighbours[chosen[j]]
@@ -249,10 +250,13 @@ def _lower(
                 if least[y] > 0 and cells * evidence.cardinalities[y] <= max_cells:
                     others[m] = y
                     m += 1
+            n_tests += m
             associations(evidence, given, x, others[:m], False, found)
             for i in range(m):
                 least[others[i]] = min(least[others[i]], found[i])
             changed = next_combination(chosen, size - 1, last)
+        if n_tests == 0:  # with larger sets there is none to make either
+            break
 
 
 @inlined
@@ -276,15 +280,20 @@ def _is_explained(
     for size in range(1, min(n - 1, most) + 1):
         chosen, given = np.arange(size), np.empty(size, dtype=np.int64)
         changed = 0
+        n_tests = 0
         # The later ones stand first, so in every choice that has one it is the first.
         while changed >= 0 and chosen[0] < n - 1 - k:
             for j in range(size):
                 given[j] = others[chosen[j]]
             set_base(evidence)
             cells = _cells(evidence.cardinalities, x, given) * evidence.cardinalities[neighbours[k]]
-            if cells <= max_cells and not is_dependent(evidence, given, x, neighbours[k], 0.0):
-                return True
+            if cells <= max_cells:
+                n_tests += 1
+                if not is_dependent(evidence, given, x, neighbours[k], 0.0):
+                    return True
             changed = next_combination(chosen, size - 1, n - 1)
+        if n_tests == 0:
+            break
     return False
 
 
