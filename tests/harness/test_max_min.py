@@ -133,3 +133,18 @@ def test_dense_candidates_leave_plain_search() -> None:
     assert candidates_at_defaults(data).sum() == 20
 
     assert hill_climbing(data, rng=rng) == mmhc(data)
+
+
+def test_many_candidates_and_few_rows_come_to_an_end() -> None:
+    """40 variables that no testable set explains are all candidates: sets beyond those are not gone through.
+
+    There are 2^39 of them.
+    """
+    rng = np.random.default_rng(8)
+    hidden = rng.integers(0, 2, (100, 1))
+    codes = np.where(rng.random((100, 40)) < 0.05, rng.integers(0, 2, (100, 40)), hidden).astype(np.uint8)
+    data = Dataset(tuple(f"v{j}" for j in range(40)), (("0", "1"),) * 40, codes)
+
+    found = find_candidates(data_tests(data, alpha=0.05), max_cells=100 / 13)
+
+    assert found.sum() == 40 * 39
