@@ -141,6 +141,16 @@ class Knowledge:
         directions.flags.writeable = False
         return directions
 
+    @property
+    def joined(self) -> NDArray[np.bool_]:
+        """Which pairs are known to be adjacent: symmetric bool array, shape (p, p)."""
+        return self.arcs | self.arcs.T
+
+    @property
+    def apart(self) -> NDArray[np.bool_]:
+        """Which pairs are known not to be adjacent: symmetric bool array, shape (p, p), the diagonal True."""
+        return self.excluded & self.excluded.T
+
     def reordered(self, positions: NDArray[np.int64], names: tuple[str, ...]) -> Knowledge:
         """Return the same knowledge with variable ``positions[j]`` in place j, under other names.
 

@@ -287,7 +287,7 @@ def find_neighbours(
         p if max_conditioning is None else max_conditioning,
     )
     if knowledge is not None:
-        adjacent &= ~(knowledge.excluded & knowledge.excluded.T)
+        adjacent &= ~knowledge.apart
     others = _common_neighbours(adjacent, separators.pair)
     pair = np.concatenate([separators.pair, others.pair])
     order = np.argsort(pair)
@@ -305,7 +305,7 @@ def find_neighbours(
 
 def _told_pairs(evidence: Evidence, knowledge: Knowledge | None) -> NDArray[np.bool_]:
     p = len(evidence.cardinalities)
-    return np.zeros((p, p), dtype=np.bool_) if knowledge is None else knowledge.arcs | knowledge.arcs.T
+    return np.zeros((p, p), dtype=np.bool_) if knowledge is None else knowledge.joined
 
 
 # Blankets ---------------------------------------------------------------------------------------------

@@ -5,7 +5,7 @@
    association counts that it has given any set of the neighbours so far; until that is 0 for all others.
    Then those leave that some set of the others explains. A pair is a candidate if each has the other: that
    takes away what one side alone lets pass, descendants that are no children.
-2. *Search.* `harness.learners.greedy_dag.climb`, with arcs between candidates only. The published search
+2. *Search.* `harness.learners.greedy_search.climb`, with arcs between candidates only. The published search
    also takes worsening steps (a tabu list); this one ends where no step improves.
 """
 
@@ -152,8 +152,8 @@ def find_candidates(
     dependent = marginally_dependent(evidence)
     is_told = np.zeros((p, p), dtype=np.bool_)
     if knowledge is not None:
-        is_told = knowledge.arcs | knowledge.arcs.T
-        dependent &= ~(knowledge.excluded & knowledge.excluded.T)
+        is_told = knowledge.joined
+        dependent &= ~knowledge.apart
     neighbours = _grow_and_shrink(
         evidence, dependent, is_told, p if max_conditioning is None else max_conditioning, max_cells
     )

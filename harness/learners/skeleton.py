@@ -129,7 +129,7 @@ def find_skeleton(
     is_told = np.zeros((p, p), dtype=np.bool_)
     may_explain = np.ones((p, p), dtype=np.bool_)  # [x, w]: w may stand in the sets of x
     if knowledge is not None:
-        is_told = knowledge.arcs | knowledge.arcs.T
+        is_told = knowledge.joined
         may_explain = ~knowledge.excluded.T
         adjacent |= is_told
     strength = np.zeros((p, p)) if at_once else np.round(evidence.statistics, DECIMALS)
@@ -151,7 +151,7 @@ def find_skeleton(
             break
         levels.append((pairs, given))
     if knowledge is not None:
-        levels += _part(adjacent, knowledge.excluded & knowledge.excluded.T)
+        levels += _part(adjacent, knowledge.apart)
     return Skeleton(adjacent, collect_separators(levels))
 
 

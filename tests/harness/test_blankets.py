@@ -209,7 +209,7 @@ class PlainBlankets:
         self.strength = np.zeros((p, p))
         self.related = np.zeros((p, p), dtype=bool)
         for x, y in combinations(range(p), 2):
-            self.strength[x, y] = self.strength[y, x] = self.test_of(x, y, ())[0]
+            self.strength[x, y] = self.strength[y, x] = self.statistic_of(x, y, ())[0]
             self.related[x, y] = self.related[y, x] = self.association(x, y, ()) > 0
         self.n_circles = self.n_removed = 0
         self.blankets = [self.blanket(x) for x in range(p)]
@@ -217,14 +217,14 @@ class PlainBlankets:
         self.adjacent = np.zeros((p, p), dtype=bool)
         self.join_neighbours()
 
-    def test_of(self, x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
+    def statistic_of(self, x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
         table = count_plain(self.columns, [*given, x, y])
         result = independence_test(table.reshape(-1, *table.shape[-2:]), test=self.test)
         return round(result.statistic, 6), result.df
 
     def association(self, x: int, y: int, given: tuple[int, ...]) -> float:
         """Return how far the statistic is beyond its critical value, as of Wilson and Hilferty (1931)."""
-        statistic, df = self.test_of(x, y, given)
+        statistic, df = self.statistic_of(x, y, given)
         critical = self.limits.get(df, chdtri(df, self.alpha) if df > 0 else np.inf)
         if statistic <= critical:
             return 0.0
@@ -312,7 +312,7 @@ class PlainBlankets:
             x, z, y = collider
             if (z, x) not in arrows and (z, y) not in arrows:
                 return (-1.0,)
-            statistic, df = self.test_of(x, y, (*self.separators[x, y], z))
+            statistic, df = self.statistic_of(x, y, (*self.separators[x, y], z))
             return (chdtrc(df, statistic), -statistic)
 
         arrow = self.adjacent & ~self.excluded

@@ -85,7 +85,7 @@ class PlainPc:
         self.excluded = known.excluded & ~np.eye(p, dtype=bool)
         self.strength = np.zeros((p, p))
         for x, y in combinations(range(p), 2):
-            self.strength[x, y] = self.strength[y, x] = self.test_of(x, y, ())[0]
+            self.strength[x, y] = self.strength[y, x] = self.statistic_of(x, y, ())[0]
         self.adjacent = np.zeros((p, p), dtype=bool)
         for x, y in combinations(range(p), 2):
             self.join(x, y, self.told[x, y] or not self.separates(x, y, ()))
@@ -101,13 +101,13 @@ class PlainPc:
     def join(self, x: int, y: int, is_adjacent: bool) -> None:
         self.adjacent[x, y] = self.adjacent[y, x] = is_adjacent
 
-    def test_of(self, x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
+    def statistic_of(self, x: int, y: int, given: tuple[int, ...]) -> tuple[float, int]:
         table = count_plain(self.columns, [*given, x, y])
         result = independence_test(table.reshape(-1, *table.shape[-2:]), test=self.test)
         return round(result.statistic, 6), result.df
 
     def separates(self, x: int, y: int, given: tuple[int, ...]) -> bool:
-        statistic, df = self.test_of(x, y, given)
+        statistic, df = self.statistic_of(x, y, given)
         cells = np.prod([float(self.sizes[v]) for v in (*given, x, y)])
         if df > 0 and self.data.n_rows < self.min_per_cell * cells:
             return False
@@ -183,7 +183,7 @@ class PlainPc:
             x, z, y = collider
             if (z, x) not in arrows and (z, y) not in arrows:
                 return (-1.0,)
-            statistic, df = self.test_of(x, y, (*self.separators.get((x, y), ()), z))
+            statistic, df = self.statistic_of(x, y, (*self.separators.get((x, y), ()), z))
             return (chi2.sf(statistic, df), -statistic)
 
         arrow = self.adjacent & ~self.excluded
